@@ -35,8 +35,8 @@ class InputError(GravbasinError, ValueError):
 
     Examples
     --------
-    >>> print(InputError("crater.rim_diameter_km", -3, "must be greater than 0", "give the final rim diameter", "a.toml"))
-    a.toml: crater.rim_diameter_km = -3: must be greater than 0; give the final rim diameter
+    >>> print(InputError("history.erosion_km", -3, "must not be negative", "give the rock removed", "a.toml"))
+    a.toml: history.erosion_km = -3: must not be negative; give the rock removed
     """
 
     def __init__(self, what: str, value: object, rule: str, remedy: str, where: str = "") -> None:

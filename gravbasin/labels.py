@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 import xarray as xr
 
-__all__ = ["data_array", "provenance", "read_provenance", "versions"]
+__all__ = ["coordinate", "data_array", "provenance", "read_provenance", "versions"]
 
 _COORDINATES = {
     "easting": {"units": "m", "long_name": "easting", "standard_name": "projection_x_coordinate", "axis": "X"},
@@ -41,20 +41,25 @@ def data_array(
     dims : sequence of str
         Dimension names.
     coords : mapping
-        Coordinate values by name (arrays, or ``(dim, array)`` pairs).
+        One-dimensional coordinate values by name.
     name, units, long_name : str
         CF name, unit and description of the data.
     **attrs
         Further attributes (strings and numbers only, so that netCDF keeps them).
     """
-    labelled = {}
-    for key, value in coords.items():
-        dim, data = value if isinstance(value, tuple) else (key, value)
-        labelled[key] = xr.Variable(dim, np.asarray(data, dtype=float), _COORDINATES.get(key, {}))
+    labelled = {key: coordinate(key, value) for key, value in coords.items()}
     return xr.DataArray(
-        np.asarray(values), dims=tuple(dims), coords=labelled, name=name,
+        np.asarray(values),
+        dims=tuple(dims),
+        coords=labelled,
+        name=name,
         attrs={"units": units, "long_name": long_name, **attrs},
     )
+
+
+def coordinate(name: str, values: Any) -> xr.Variable:
+    """A one-dimensional coordinate with the units and CF attributes that belong to its name."""
+    return xr.Variable(name, np.asarray(values, dtype=float), _COORDINATES.get(name, {}))
 
 
 def versions(*packages: str) -> dict[str, str]:

@@ -1,0 +1,19 @@
+"""The structure: size laws, target column, displacement, damage, fill, history, and the section assembled from them."""
+
+from gravbasin.crater.dimensions import CraterDimensions, crater_dimensions
+from gravbasin.crater.model import CraterModel, crater_model
+from gravbasin.crater.section import PARTS, UNITS, Mesh, contrast_parts, default_mesh, density_section, section_parts
+
+__all__ = [
+    "PARTS",
+    "UNITS",
+    "CraterDimensions",
+    "CraterModel",
+    "Mesh",
+    "contrast_parts",
+    "crater_dimensions",
+    "crater_model",
+    "default_mesh",
+    "density_section",
+    "section_parts",
+]

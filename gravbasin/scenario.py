@@ -1,0 +1,260 @@
+"""The scenario file as frozen models: every field with its unit, bounds, default and one sentence.
+
+Kilometres in the file, the unit in every name; conversion to SI happens once, at the doors of `crater` and `observed`.
+"""
+
+from __future__ import annotations
+
+from itertools import pairwise
+from pathlib import Path
+from typing import Annotated, Literal
+
+from pydantic import BaseModel, ConfigDict, Field, model_validator
+
+__all__ = ["Scenario"]
+
+Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
+NotNegative = Annotated[float, Field(ge=0, allow_inf_nan=False)]
+Density = Annotated[float, Field(gt=0, le=6000, allow_inf_nan=False)]
+Contrast = Annotated[float, Field(ge=-2000, le=2000, allow_inf_nan=False)]
+Probability = Annotated[float, Field(gt=0, lt=1)]
+
+
+class _Table(BaseModel):
+    model_config = ConfigDict(frozen=True, extra="forbid", str_strip_whitespace=True)
+
+
+class Crater(_Table):
+    """The structure as it was when fresh."""
+
+    rim_diameter_km: float = Field(gt=2, le=300, description="final rim-to-rim diameter before erosion, km")
+    target_rock: Literal["crystalline", "sedimentary", "mixed"] = Field(
+        "crystalline", description="what was hit: crystalline basement, thick sediments, or sediments over basement"
+    )
+    cover_thickness_km: NotNegative = Field(0.0, description="sediments over the basement at impact, km (mixed only)")
+    setting: Literal["land", "marine"] = Field(
+        "land", description="where it formed; sea water seals breccia and fractures early"
+    )
+    age_myr: Positive | None = Field(None, description="age of the impact, million years; needed with an erosion rate")
+    transient_law: Literal["collapse scaling", "shallow exponent"] = Field(
+        "collapse scaling", description="law from rim to transient diameter (see crater_dimensions)"
+    )
+    uplift_law: Literal["stratigraphic", "shield"] = Field(
+        "stratigraphic", description="law of structural uplift; the two differ by a factor of two"
+    )
+    melt_coefficient: float = Field(2e-4, ge=1e-6, le=1e-3, description="c of melt volume = c Dtc^3.85, km³")
+
+
+class Dimensions(_Table):
+    """Measured or assumed dimensions; a value given here wins over its size law."""
+
+    transient_diameter_km: Positive | None = Field(None, description="diameter of the transient cavity, km")
+    transient_depth_km: Positive | None = Field(None, description="depth of the transient cavity, km")
+    apparent_depth_km: NotNegative | None = Field(None, description="original ground to the top of the impact fill, km")
+    peak_height_km: NotNegative | None = Field(None, description="central peak or peak ring above the fill, km")
+    structural_uplift_km: NotNegative | None = Field(None, description="rise of rock below the centre of the floor, km")
+    central_uplift_diameter_km: Positive | None = Field(None, description="base of the central uplift, km")
+    peak_ring_diameter_km: NotNegative | None = Field(None, description="crest of the peak ring, km; 0 for none")
+    melt_volume_km3: NotNegative | None = Field(None, description="volume of the melt sheet, km³")
+    melt_diameter_km: Positive | None = Field(None, description="diameter of the melt sheet, km")
+    breccia_thickness_km: NotNegative | None = Field(None, description="thickness of the breccia lens, km")
+    fracture_base_km: Positive | None = Field(None, description="depth below the floor at which fractures end, km")
+    moho_uplift_km: NotNegative | None = Field(None, description="rise of the Moho below the centre, km")
+
+
+class Layer(_Table):
+    """One layer of the density column before impact."""
+
+    top_km: NotNegative = Field(description="top of the layer below the ground before impact, km")
+    density_kg_m3: Density = Field(description="density at the top of the layer, kg/m³")
+    gradient_kg_m3_per_km: float = Field(0.0, ge=-100, le=300, description="increase of density with depth, kg/m³/km")
+
+
+def _shield_column() -> tuple[Layer, ...]:
+    return (
+        Layer(top_km=0.0, density_kg_m3=2680.0, gradient_kg_m3_per_km=10.0),
+        Layer(top_km=20.0, density_kg_m3=2880.0, gradient_kg_m3_per_km=5.0),
+    )
+
+
+class Background(_Table):
+    """The density column of the target before impact: crustal layers, Moho, mantle."""
+
+    layers: tuple[Layer, ...] = Field(
+        default_factory=_shield_column, min_length=1, description="crustal layers from the ground down"
+    )
+    moho_km: float = Field(35.0, gt=5, le=90, description="depth of the Moho before impact, km")
+    mantle_density_kg_m3: Density = Field(3300.0, description="density below the Moho, kg/m³")
+    cover_density_kg_m3: Density = Field(2450.0, description="density of the sedimentary cover (mixed targets), kg/m³")
+
+    @model_validator(mode="after")
+    def _ordered(self) -> Background:
+        tops = [layer.top_km for layer in self.layers]
+        if tops[0] != 0:
+            raise ValueError(f"the first layer must start at 0 km, not {tops[0]:g}; set its top_km to 0")
+        if any(b <= a for a, b in pairwise(tops)):
+            raise ValueError(f"layers must be listed from the top down, not {tops}; sort them by top_km")
+        if tops[-1] >= self.moho_km:
+            raise ValueError(f"every layer must start above the Moho ({self.moho_km:g} km); lower moho_km or drop it")
+        return self
+
+
+class Damage(_Table):
+    """Porosity of the fractured floor and what has closed it since."""
+
+    form: Literal["exponential", "hyperbolic", "pressure"] = Field(
+        "exponential", description="how porosity decays below the floor"
+    )
+    porosity: float = Field(0.08, ge=0, le=0.4, description="fracture porosity at the floor, 0-1")
+    decay_km: Positive | None = Field(None, description="decay length, km; by default min(0.12 D, 3 km)")
+    closure_pressure_mpa: Positive = Field(200.0, description="pressure of the rock column that closes cracks, MPa")
+    pressure_exponent: Positive = Field(1.0, description="exponent n of the pressure form (1 - P/Pc)^n")
+    retention: float | None = Field(
+        None, gt=0, le=1, description="share of fracture porosity not sealed since; 1 on land, 0.25 marine by default"
+    )
+    core_suppression: float | None = Field(
+        None,
+        ge=0,
+        le=1,
+        description="share of porosity missing in the core of the uplift; by default from the diameter",
+    )
+    pore_fluid: Literal["fresh water", "sea water", "dry"] = Field("fresh water", description="what fills the pores")
+
+
+class Fill(_Table):
+    """Rocks within the crater: breccia, melt, and what filled the hollow later."""
+
+    breccia_contrast_kg_m3: Contrast = Field(-270.0, description="breccia minus intact target, kg/m³")
+    breccia_retention: float | None = Field(
+        None, gt=0, le=1, description="share of the breccia contrast not sealed since; 1 on land, 0.1 marine by default"
+    )
+    melt_contrast_kg_m3: Contrast = Field(-80.0, description="melt rock minus intact target, kg/m³")
+    hollow: Literal["sediment", "water", "air"] = Field(
+        "sediment", description="what fills the hollow left above the impact rocks; air counts as corrected terrain"
+    )
+    sediment_density_kg_m3: Density = Field(2300.0, description="density of sediment in the hollow, kg/m³")
+    lithology: Literal["shale", "sand", "chalk", "shaly sand", "platform carbonate"] | None = Field(
+        None, description="compact the sediment by this lithology's curve instead of sediment_density_kg_m3"
+    )
+
+
+class Event(_Table):
+    """One episode after the impact: rock removed or laid down."""
+
+    erode_km: NotNegative | None = Field(None, description="thickness removed, km")
+    bury_km: NotNegative | None = Field(None, description="thickness laid down, km")
+
+    @model_validator(mode="after")
+    def _one(self) -> Event:
+        if (self.erode_km is None) == (self.bury_km is None):
+            raise ValueError("an event is either erode_km or bury_km; give exactly one of them")
+        return self
+
+
+class History(_Table):
+    """What happened after the impact: erosion, burial, or a list of both in order."""
+
+    erosion_km: NotNegative | None = Field(None, description="rock stripped below the ground before impact, km")
+    erosion_rate_m_per_myr: Positive | None = Field(
+        None, description="mean erosion rate, m/Myr, used with crater.age_myr instead of erosion_km"
+    )
+    burial_km: NotNegative = Field(0.0, description="sediment laid over the eroded surface, km")
+    events: tuple[Event, ...] = Field((), description="episodes in order, instead of erosion_km and burial_km")
+    cover_density_kg_m3: Density = Field(2400.0, description="density of the burying sediment, kg/m³")
+
+    @model_validator(mode="after")
+    def _one_way(self) -> History:
+        if self.events and (self.erosion_km is not None or self.erosion_rate_m_per_myr or self.burial_km):
+            raise ValueError("events replace erosion_km, erosion_rate_m_per_myr and burial_km; give one or the other")
+        if self.erosion_km is not None and self.erosion_rate_m_per_myr:
+            raise ValueError("erosion_km and erosion_rate_m_per_myr exclude each other; keep one")
+        return self
+
+
+class Observed(_Table):
+    """The map under test."""
+
+    path: Path = Field(description="grid file: netCDF, CSV x,y,value, or GeoTIFF")
+    variable: str | None = Field(None, description="netCDF variable, when the file holds several")
+    units: str | None = Field(None, description="units of the values, when the file does not say")
+    nan: Literal["refuse", "skip"] = Field("refuse", description="what to do with empty nodes")
+    centre_easting_km: float = Field(0.0, description="easting of the structure's centre in the map's coordinates, km")
+    centre_northing_km: float = Field(0.0, description="northing of the centre, km")
+    resolution_km: Positive | None = Field(
+        None, description="half the shortest wavelength the map holds, km; by default twice the grid step"
+    )
+
+
+class Noise(_Table):
+    """Geological noise: estimated from the map unless every value of a stated model is given."""
+
+    sill_mgal: Positive | None = Field(None, description="standard deviation of the correlated part, mGal")
+    range_km: Positive | None = Field(None, description="correlation range L of the Matérn model, km")
+    smoothness: float | None = Field(None, ge=0.1, le=5, description="smoothness nu of the Matérn model")
+    nugget_mgal: NotNegative | None = Field(None, description="standard deviation of the uncorrelated part, mGal")
+    regional_order: Literal[0, 1, 2] = Field(1, description="order of the polynomial regional")
+
+    @model_validator(mode="after")
+    def _whole(self) -> Noise:
+        given = [self.sill_mgal, self.range_km, self.smoothness, self.nugget_mgal]
+        if any(v is None for v in given) and any(v is not None for v in given):
+            raise ValueError("a stated noise needs sill_mgal, range_km, smoothness and nugget_mgal together; give all")
+        return self
+
+    @property
+    def stated(self) -> bool:
+        """Whether the scenario states the noise instead of leaving it to the map."""
+        return self.sill_mgal is not None
+
+
+class Model(_Table):
+    """Resolution of the model; the defaults pass the audit for complex craters."""
+
+    layers: int = Field(80, ge=20, le=400, description="layers of the section")
+    rings: int = Field(160, ge=40, le=800, description="rings of the section")
+    grid_step_km: Positive | None = Field(None, description="step of the modelled grid; by default that of the map")
+    station_height_m: float = Field(1.0, ge=0.0, le=10000, description="height of the stations above today's ground, m")
+    draws: int = Field(200, ge=20, le=20000, description="draws of the size-law scatter behind every band")
+    scatter: bool = Field(True, description="let size laws and contrasts vary by their published scatter in the draws")
+
+
+class Inference(_Table):
+    """Thresholds of the verdict and effort of the random parts."""
+
+    false_alarm_probability: Probability = Field(0.001, description="accepted probability of a false alarm")
+    detection_probability: Probability = Field(0.5, description="least probability of detection to call it visible")
+    consistent_p_value: Probability = Field(0.05, description="a misfit less probable than this is inconsistent")
+    outer_radius_in_diameters: float = Field(1.5, ge=0.75, le=4, description="radius of the tested disc, diameters")
+    chance_centres: int = Field(1000, ge=0, le=100000, description="other centres tried on the map")
+    noise_points: int = Field(700, ge=100, le=4000, description="map nodes used to estimate the noise")
+    noise_draws: int = Field(24, ge=0, le=1000, description="plausible noise models behind the detectability band")
+
+
+class Scenario(_Table):
+    """One question to gravbasin: a structure, its history, a map, thresholds."""
+
+    name: str = Field("unnamed structure", min_length=1, description="name shown in the report")
+    note: str = Field("", description="a sentence for the report's head")
+    seed: int = Field(1, ge=0, description="seed of everything random")
+    crater: Crater
+    dimensions: Dimensions = Dimensions()
+    background: Background = Background()
+    damage: Damage = Damage()
+    fill: Fill = Fill()
+    history: History = History()
+    observed: Observed | None = None
+    noise: Noise = Noise()
+    model: Model = Model()
+    inference: Inference = Inference()
+
+    @model_validator(mode="after")
+    def _together(self) -> Scenario:
+        if self.history.erosion_rate_m_per_myr and self.crater.age_myr is None:
+            raise ValueError("history.erosion_rate_m_per_myr needs crater.age_myr; give the age or erosion_km")
+        if self.crater.target_rock == "mixed" and self.crater.cover_thickness_km == 0:
+            raise ValueError("crater.target_rock = 'mixed' needs crater.cover_thickness_km greater than 0; give it")
+        if self.crater.target_rock != "mixed" and self.crater.cover_thickness_km > 0:
+            raise ValueError("crater.cover_thickness_km applies to mixed targets only; set target_rock = 'mixed'")
+        if self.crater.cover_thickness_km >= self.background.moho_km:
+            raise ValueError("crater.cover_thickness_km must be less than background.moho_km; give a thinner cover")
+        return self
