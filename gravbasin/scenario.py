@@ -225,6 +225,7 @@ class Inference(_Table):
     detection_probability: Probability = Field(0.5, description="least probability of detection to call it visible")
     consistent_p_value: Probability = Field(0.05, description="a misfit less probable than this is inconsistent")
     outer_radius_in_diameters: float = Field(1.5, ge=0.75, le=4, description="radius of the tested disc, diameters")
+    station_spacing_km: Positive = Field(5.0, description="station spacing assumed where there is no map, km")
     chance_centres: int = Field(1000, ge=0, le=100000, description="other centres tried on the map")
     noise_points: int = Field(700, ge=100, le=4000, description="map nodes used to estimate the noise")
     noise_draws: int = Field(24, ge=0, le=1000, description="plausible noise models behind the detectability band")

@@ -1,0 +1,118 @@
+"""Gaussian likelihood of ring means with their full covariance and the regional estimated jointly."""
+
+from __future__ import annotations
+
+import dataclasses
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import linalg, stats
+
+from gravbasin.errors import CannotFinish
+
+__all__ = ["Misfit", "RingLikelihood", "ring_likelihood"]
+
+Array = NDArray[np.float64]
+
+
+@dataclasses.dataclass(frozen=True)
+class Misfit:
+    """Agreement of a model with data: chi-square, degrees of freedom, probability of a misfit at least as large."""
+
+    chi2: float
+    dof: int
+    p_value: float
+
+
+@dataclasses.dataclass(frozen=True, eq=False)
+class RingLikelihood:
+    """Whitening that also removes the regional; every statistic is an inner product of whitened vectors.
+
+    Attributes
+    ----------
+    factor : (n, n) array
+        Lower Cholesky factor of the covariance, mGal.
+    nuisance : (n, q) array
+        Orthonormal columns spanning the whitened regional.
+    regional : (n, p) array
+        The regional's columns as given.
+
+    Notes
+    -----
+    y = A t + X b + n, n ~ N(0, C). With W = L⁻¹ and the projector P off the whitened X, the amplitude is
+    (t'Py)/(t'Pt), its variance 1/(t'Pt), the signal-to-noise ratio of amplitude one sqrt(t'Pt). This is the
+    generalised-least-squares matched filter with the regional profiled out.
+    """
+
+    factor: Array
+    nuisance: Array
+    regional: Array
+
+    @property
+    def dof(self) -> int:
+        """Number of rings less the rank of the regional."""
+        return int(self.factor.shape[0] - self.nuisance.shape[1])
+
+    def whiten(self, vectors: Array) -> Array:
+        """Whiten and project off the regional.
+
+        Parameters
+        ----------
+        vectors : (n,) or (n, m) array, mGal
+            Ring means or templates, one a column.
+        """
+        white = linalg.solve_triangular(self.factor, vectors, lower=True, check_finite=False)
+        return np.asarray(white - self.nuisance @ (self.nuisance.T @ white))
+
+    def snr(self, templates: Array) -> Array:
+        """Signal-to-noise ratio of templates at their own amplitude, shape () or (m,)."""
+        return np.sqrt(np.sum(self.whiten(templates) ** 2, axis=0))
+
+    def amplitude(self, template: Array, data: Array) -> tuple[float, float]:
+        """Best multiple of the template and its standard error, with the regional free."""
+        t, y = self.whiten(template), self.whiten(data)
+        power = float(t @ t)
+        if power == 0.0:
+            return 0.0, np.inf
+        return float(t @ y) / power, power**-0.5
+
+    def misfit(self, model: Array, data: Array) -> Misfit:
+        """Chi-square of data minus model with the regional free, and its p-value."""
+        residual = self.whiten(np.asarray(data) - model)
+        chi2 = float(residual @ residual)
+        return Misfit(chi2, self.dof, float(stats.chi2.sf(chi2, self.dof)))
+
+    def fitted_regional(self, residual: Array) -> Array:
+        """The regional's part of the ring means, mGal, fitted to data minus model."""
+        white_x = linalg.solve_triangular(self.factor, self.regional, lower=True, check_finite=False)
+        white_r = linalg.solve_triangular(self.factor, residual, lower=True, check_finite=False)
+        coefficients, *_ = np.linalg.lstsq(white_x, white_r, rcond=1e-9)
+        return np.asarray(self.regional @ coefficients)
+
+
+def ring_likelihood(covariance: Array, regional: Array) -> RingLikelihood:
+    """The likelihood of ring means under a covariance, with a regional of free coefficients.
+
+    Parameters
+    ----------
+    covariance : (n, n) array, mGal²
+        Covariance of the ring means (noise, and the scatter of the model where that is to count).
+    regional : (n, p) array
+        Ring means of the regional's columns. Columns that vanish or repeat over the rings (a plane averages out over
+        complete rings) do not count.
+
+    Raises
+    ------
+    CannotFinish
+        A covariance that is not positive definite.
+    """
+    try:
+        factor = linalg.cholesky(covariance, lower=True)
+    except linalg.LinAlgError:
+        raise CannotFinish(
+            "the covariance of the ring means is singular: give the noise a nugget or widen the rings"
+        ) from None
+    regional = regional / np.maximum(np.linalg.norm(regional, axis=0), 1e-300)
+    white = linalg.solve_triangular(factor, regional, lower=True)
+    left, size, _ = np.linalg.svd(white, full_matrices=False)
+    return RingLikelihood(factor, left[:, size > 1e-6 * size[0]], regional)
