@@ -1,0 +1,287 @@
+"""A section turned into layered prisms, and their anomaly on the same grid by exact FFT convolution."""
+
+from __future__ import annotations
+
+import warnings
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import xarray as xr
+from numpy.typing import NDArray
+from scipy import fft
+
+from gravbasin.constants import GRAVITATIONAL_CONSTANT, SI_TO_MGAL
+from gravbasin.discs import ring_fractions
+from gravbasin.errors import GravbasinWarning, InputError
+from gravbasin.forward.cost import MEMORY_LIMIT_GIB, GridCost, refuse_above
+from gravbasin.forward.elliptic import row_blocks
+from gravbasin.forward.rectangles import rectangle_potentials
+from gravbasin.forward.result import anomaly_array
+from gravbasin.forward.sections import RingCells, ascending, ring_cells
+from gravbasin.labels import coordinate, data_array, provenance, read_provenance, versions
+
+__all__ = ["PrismLayers", "grid_anomaly", "layered_prisms", "prism_layers"]
+
+Array = NDArray[np.float64]
+
+_NEGLIGIBLE = 0.005  # of the peak contrast: below this the rim of a model, or what a grid cuts off, is not worth a word
+_SMALLEST_CELL = 1.0  # metres; anything smaller is a grid in degrees
+_WORKERS = 2
+
+
+def layered_prisms(
+    section: xr.Dataset,
+    easting_m: Any,
+    northing_m: Any,
+    *,
+    centre: tuple[float, float] = (0.0, 0.0),
+    memory_limit_gib: float = MEMORY_LIMIT_GIB,
+) -> xr.Dataset:
+    """Prisms on a map grid with the section's mass in every cell.
+
+    Parameters
+    ----------
+    section : Dataset
+        ``density_contrast`` on (depth, radius) with ``depth_edges`` and ``radius_edges``.
+    easting_m, northing_m : (n_easting,), (n_northing,) arrays, m
+        Cell centres, ascending and evenly spaced.
+    centre : (float, float), m
+        Easting and northing of the section's axis.
+    memory_limit_gib : float
+        Refuse rather than hold more than this.
+
+    Returns
+    -------
+    Dataset
+        ``density_contrast`` (layer, northing, easting), kg/m³, with ``depth_edges``. A cell that rings share gets
+        their mean, weighted by the exact areas of ring and cell, so mass is kept.
+
+    Raises
+    ------
+    InputError
+        A grid in degrees, unsorted, uneven or not finite.
+    CannotFinish
+        The prisms would not fit in `memory_limit_gib`.
+
+    Warns
+    -----
+    GravbasinWarning
+        The section ends before its contrast has died out, or the grid ends before the section does.
+
+    Examples
+    --------
+    >>> section = xr.Dataset(
+    ...     {"density_contrast": (("depth", "radius"), [[-100.0, 0.0]])},
+    ...     coords={"depth_edges": [0.0, 2e3], "radius_edges": [0.0, 1e4, 1.5e4]},
+    ... )
+    >>> axis = np.arange(-14.5e3, 15e3, 1e3)
+    >>> prisms = layered_prisms(section, axis, axis)
+    >>> bool(np.isclose(prisms.density_contrast.sum() * 1e6, -100 * np.pi * 1e8))  # the disc's own mass per metre
+    True
+    """
+    cells = ring_cells(section, "layered_prisms")
+    easting = _even_axis("easting_m", easting_m, "layered_prisms")
+    northing = _even_axis("northing_m", northing_m, "layered_prisms")
+    shape = (cells.depth_edges.size - 1, northing.size, easting.size)
+    refuse_above(GridCost(*shape).prism_bytes, memory_limit_gib, "layered_prisms")
+    _warn_of_edges(cells, easting - centre[0], northing - centre[1])
+    share = ring_fractions(easting - centre[0], northing - centre[1], cells.radius_edges)
+    density = np.empty(shape)
+    for layer, row in zip(density, cells.contrast, strict=True):
+        layer[...] = (share @ row).reshape(shape[1:])
+    contrast = data_array(
+        density,
+        ("layer", "northing", "easting"),
+        {"northing": northing, "easting": easting},
+        name="density_contrast",
+        units="kg m-3",
+        long_name="density contrast of the prism",
+    )
+    edges = coordinate("depth_edges", cells.depth_edges)
+    facts = {"centre_m": list(centre), "section": read_provenance(section), "versions": versions("numpy")}
+    return contrast.to_dataset().assign_coords(depth_edges=edges).assign_attrs(provenance=provenance(**facts))
+
+
+def _even_axis(name: str, values: Any, where: str) -> Array:
+    axis = ascending(name, values, where)
+    step = np.diff(axis)
+    if step.min() < _SMALLEST_CELL:
+        raise InputError(
+            name,
+            f"spacing {step.min():g}",
+            f"must be at least {_SMALLEST_CELL:g} m",
+            "give projected metres, not degrees",
+            where,
+        )
+    if step.max() - step.min() > 1e-6 * step.max():
+        raise InputError(
+            name,
+            f"spacing from {step.min():g} to {step.max():g} m",
+            "must be even",
+            "resample to a regular grid",
+            where,
+        )
+    return axis
+
+
+def _warn_of_edges(cells: RingCells, easting: Array, northing: Array) -> None:
+    """Say where a model or a grid ends too early; `easting` and `northing` are relative to the axis."""
+    strength = np.abs(cells.contrast).max(axis=0)
+    filled = np.flatnonzero(strength > _NEGLIGIBLE * cells.peak)
+    if filled.size == 0:
+        return
+    if filled[-1] == strength.size - 1:
+        warnings.warn(
+            f"the section's contrast is still {100 * strength[-1] / cells.peak:.2g} % of its peak at its rim, "
+            f"{cells.radius_edges[-1] / 1e3:g} km: what lies beyond is missing; widen the section",
+            GravbasinWarning,
+            stacklevel=3,
+        )
+    reach = min(side for axis in (easting, northing) for side in _sides(axis))
+    outer = cells.radius_edges[filled[-1] + 1]
+    if reach < outer:
+        warnings.warn(
+            f"the grid reaches {reach / 1e3:g} km from the centre but the section has contrast out to "
+            f"{outer / 1e3:g} km: what lies outside the grid is missing; widen the grid or pad it and crop the result",
+            GravbasinWarning,
+            stacklevel=3,
+        )
+
+
+def _sides(axis: Array) -> tuple[float, float]:
+    half = 0.5 * (axis[1] - axis[0])
+    return float(half - axis[0]), float(half + axis[-1])
+
+
+@dataclass(frozen=True, eq=False)
+class PrismLayers:
+    """Layered prisms as plain arrays.
+
+    Attributes
+    ----------
+    density : (n_layer, n_northing, n_easting) array, kg/m³
+    depth_edges, northing, easting : arrays, m
+    """
+
+    density: Array
+    depth_edges: Array
+    northing: Array
+    easting: Array
+
+    @property
+    def spacing(self) -> tuple[float, float]:
+        """Size of the cells in northing and easting, m."""
+        n, e = (float((axis[-1] - axis[0]) / (axis.size - 1)) for axis in (self.northing, self.easting))
+        return n, e
+
+
+def prism_layers(prisms: xr.Dataset, where: str) -> PrismLayers:
+    """The prisms' density and edges, checked.
+
+    Raises
+    ------
+    InputError
+        A part is missing, does not fit the others, or is not finite.
+    """
+    remedy = "give prisms as gravbasin.layered_prisms returns them"
+    missing = {"density_contrast", "depth_edges", "northing", "easting"} - set(map(str, prisms.variables))
+    if missing:
+        raise InputError("prisms", f"without {', '.join(sorted(missing))}", "must be complete", remedy, where)
+    contrast = prisms["density_contrast"]
+    if set(contrast.dims) != {"layer", "northing", "easting"}:
+        raise InputError("prisms", contrast.dims, "must have the dimensions layer, northing, easting", remedy, where)
+    density = np.asarray(contrast.transpose("layer", "northing", "easting"), dtype=float)
+    edges = ascending("depth_edges", prisms["depth_edges"], where)
+    if density.shape[0] != edges.size - 1:
+        raise InputError("prisms", f"{density.shape[0]} layers", f"must fit {edges.size} depth edges", remedy, where)
+    if not np.isfinite(density).all():
+        raise InputError("prisms", "NaN or infinity", "must be finite everywhere", "repair the densities", where)
+    axes = [_even_axis(name, prisms[name], where) for name in ("northing", "easting")]
+    return PrismLayers(density, edges, *axes)
+
+
+def grid_anomaly(
+    prisms: xr.Dataset, *, height_m: float = 1.0, memory_limit_gib: float = MEMORY_LIMIT_GIB
+) -> xr.DataArray:
+    """Gravity anomaly of layered prisms above the centres of their own columns.
+
+    Parameters
+    ----------
+    prisms : Dataset
+        As `layered_prisms` returns it.
+    height_m : float
+        Height of all stations above today's ground (depth 0).
+    memory_limit_gib : float
+        Refuse rather than hold more than this.
+
+    Returns
+    -------
+    DataArray (northing, easting), mGal
+        Positive for excess mass; the exact anomaly of these prisms, to rounding.
+
+    Raises
+    ------
+    InputError
+        The prisms are not a full, even, finite set of layers.
+    CannotFinish
+        The work would not fit in `memory_limit_gib`.
+
+    Notes
+    -----
+    All columns share the layer edges, so the anomaly is a sum of two-dimensional convolutions. Each depth edge enters
+    once: the potential of a rectangle at that edge, convolved with the step of density across it. The grid is padded
+    to twice its size, so nothing wraps around. The kernel is even in both directions, hence a cosine transform of one
+    quadrant gives its whole spectrum.
+
+    Examples
+    --------
+    >>> prisms = xr.Dataset(
+    ...     {"density_contrast": (("layer", "northing", "easting"), np.full((1, 41, 41), 100.0))},
+    ...     coords={"northing": 1e6 * np.arange(41.0), "easting": 1e6 * np.arange(41.0), "depth_edges": [0.0, 1e3]},
+    ... )
+    >>> round(float(grid_anomaly(prisms)[20, 20]), 2)  # nearly the infinite slab, 2πG · 100 · 1000 = 4.194 mGal
+    4.19
+    """
+    layers = prism_layers(prisms, "grid_anomaly")
+    if not np.isfinite(height_m):
+        raise InputError("height_m", height_m, "must be finite", "give metres above the ground", "grid_anomaly")
+    cost = GridCost(*layers.density.shape)
+    refuse_above(cost.convolution_bytes, memory_limit_gib, "grid_anomaly")
+    values = _convolve(layers, float(height_m), cost.padded)
+    return anomaly_array(
+        values,
+        ("northing", "easting"),
+        {"northing": layers.northing, "easting": layers.easting},
+        engine="layers",
+        height_m=float(height_m),
+        prisms=read_provenance(prisms),
+        versions=versions("numpy", "scipy"),
+    )
+
+
+def _convolve(layers: PrismLayers, height_m: float, half_period: tuple[int, int]) -> Array:
+    shape, (m_n, m_e) = layers.density.shape[1:], half_period
+    total = np.zeros((2 * m_n, m_e + 1), dtype=complex)
+    quadrant = np.zeros((m_n + 1, m_e + 1))
+    fold = np.minimum(np.arange(2 * m_n), 2 * m_n - np.arange(2 * m_n))  # the kernel's spectrum is even
+    for edge, depth in enumerate(layers.depth_edges):
+        step = _density_step(layers.density, edge)
+        if not step.any():
+            continue
+        quadrant[: shape[0], : shape[1]] = rectangle_potentials(shape, layers.spacing, depth + height_m)
+        kernel = fft.dctn(quadrant, type=1, workers=_WORKERS)
+        rows = fft.rfft(step, 2 * m_e, axis=1, workers=_WORKERS)  # before padding the other way: half the rows are zero
+        spectrum = fft.fft(rows, 2 * m_n, axis=0, workers=_WORKERS)
+        for block in row_blocks(*total.shape):
+            total[block] += spectrum[block] * kernel[fold[block]]
+    columns = fft.ifft(total, axis=0, overwrite_x=True, workers=_WORKERS)[: shape[0]]
+    anomaly = fft.irfft(columns, 2 * m_e, axis=1, workers=_WORKERS)[:, : shape[1]]
+    return np.ascontiguousarray(anomaly) * (GRAVITATIONAL_CONSTANT * SI_TO_MGAL)
+
+
+def _density_step(density: Array, edge: int) -> Array:
+    """Density below a depth edge less the density above it: the top of one layer is the bottom of the other."""
+    if edge == 0:
+        return density[0]
+    return density[edge] - density[edge - 1] if edge < density.shape[0] else -density[-1]
