@@ -11,6 +11,7 @@ import xarray as xr
 from gravbasin.errors import CannotFinish, InputError
 from gravbasin.observed._gls import Lags, Whitened, whiten
 from gravbasin.observed._lattice import Array, Disc, Nodes, lattice_of, thin
+from gravbasin.observed._posterior import Sample, importance_sample
 from gravbasin.observed.noise import SMOOTHNESS_BOUNDS, NoiseModel
 from gravbasin.observed.regional import polynomial_basis
 
@@ -26,8 +27,9 @@ _RANGE_MEDIAN_M, _RANGE_SCATTER = 40e3, 0.7
 _NUGGET_MEDIAN, _NUGGET_SCATTER = 0.1, 1.5
 _SMOOTH_FLAT, _SMOOTH_SHOULDER = (0.5, 2.0), 0.25
 _NUGGET_BOUNDS = (1e-3, 10.0)
-_HESSIAN_STEP = np.array([0.04, 0.04, 0.08])
-_WIDEST = 1.5  # no direction of the posterior in logarithms is wider than the widest prior
+_FIRST_SCATTER = np.array([0.3, 0.4, 0.8])  # of the first round of sampling: about that of a 300-node posterior
+_ROUNDS = (60, 60, 60, 80, 100)
+_KEPT = 256  # equally likely models kept with the estimate
 
 
 @dataclass(frozen=True, eq=False)
@@ -95,12 +97,12 @@ def estimate_noise(
     max_points : int
         Most nodes to use; the cost grows with its cube.
     seed : int or numpy Generator
-        Picks the nodes.
+        Picks the nodes and the models tried.
 
     Returns
     -------
     NoiseModel
-        With the covariance of its logarithms, for `NoiseModel.draws`.
+        The posterior mean of the logarithms, with a sample of the posterior for `NoiseModel.draws`.
 
     Raises
     ------
@@ -109,9 +111,10 @@ def estimate_noise(
 
     Notes
     -----
-    Maximum a posteriori of the restricted likelihood, which unlike the plain one does not lose the variance that the
-    regional takes. Smoothness and nugget resemble each other in data of one spacing; the prior keeps both finite, the
-    reported covariance says how little is known, and `draws` carries it on.
+    Restricted likelihood, which unlike the plain one does not lose the variance that the regional takes, times a weak
+    prior. Smoothness and nugget resemble each other in data of one spacing: their posterior is a long bent ridge,
+    whose peak sits at the smooth end and whose curvature there understates its width several times. So it is sampled
+    (adaptive importance sampling, about 400 evaluations), not expanded about its peak; the sill is profiled out.
 
     Examples
     --------
@@ -129,12 +132,11 @@ def estimate_noise(
         raise InputError("resolution_m", resolution_m, "must be greater than 0 m", "give metres", where)
     if max_points < MIN_NODES:
         raise InputError("max_points", max_points, f"must be {MIN_NODES} or more", "700 is usual", where)
-    nodes = thin(lattice, lattice.valid(exclude, where=where), separation_m=resolution, max_points=max_points,
-                 rng=np.random.default_rng(seed))
+    rng = np.random.default_rng(seed)
+    nodes = thin(lattice, lattice.valid(exclude, where=where), separation_m=resolution, max_points=max_points, rng=rng)
     _check_nodes(nodes, exclude, resolution, where)
     problem = _problem(nodes, regional_order, resolution)
-    best = _minimise(problem)
-    return _model(problem, best, regional_order, resolution)
+    return _model(problem, _sample(problem, rng), regional_order, resolution, rng)
 
 
 def _check_nodes(nodes: Nodes, exclude: Disc | None, resolution: float, where: str) -> None:
@@ -147,7 +149,7 @@ def _check_nodes(nodes: Nodes, exclude: Disc | None, resolution: float, where: s
 
 def _problem(nodes: Nodes, regional_order: int, resolution: float) -> _Problem:
     lags = Lags.between(nodes)
-    bounds = np.log([(0.5 * resolution, 4.0 * lags.distance.max()), SMOOTHNESS_BOUNDS, _NUGGET_BOUNDS])
+    bounds = np.log([(resolution, 4.0 * lags.distance.max()), SMOOTHNESS_BOUNDS, _NUGGET_BOUNDS])
     design = polynomial_basis(nodes.easting, nodes.northing, regional_order)
     return _Problem(lags, design, nodes.values, bounds)
 
@@ -161,62 +163,51 @@ def _log_prior(theta: Array) -> float:
     return log_smoothness - 0.5 * sum(t**2 for t in terms)  # ln(smoothness): flat in smoothness, not its logarithm
 
 
-def _minimise(problem: _Problem) -> Array:
-    """Nelder-Mead from the best two of a coarse lattice; a unit simplex, since a default one barely moves near 0."""
+def _mode(problem: _Problem) -> Array:
+    """Roughly the mode: Nelder-Mead from the best of a coarse lattice, with a simplex of stated size.
+
+    The default simplex is a share of the start and barely moves where a logarithm is near 0.
+    """
     from scipy import optimize
 
     low, high = problem.bounds.T
     lattice = np.array(np.meshgrid(np.log([15e3, 40e3, 100e3]), np.log([0.5, 1.0, 1.8]), np.log([0.03, 0.2])))
     starts = np.unique(np.clip(lattice.reshape(3, -1).T, low, high), axis=0)
-    order = np.argsort([problem.objective(start)[0] for start in starts])
-    results = []
-    for start in starts[order[:2]]:
-        inward = np.where(start > 0.5 * (low + high), -1.0, 1.0) * np.array([0.4, 0.3, 0.7])
-        simplex = np.clip(np.vstack([start, start + np.diag(inward)]), low, high)
-        results.append(optimize.minimize(
-            lambda theta: problem.objective(theta)[0], start, method="Nelder-Mead", bounds=problem.bounds,
-            options={"initial_simplex": simplex, "xatol": 0.02, "fatol": 0.01, "maxfev": 120},
-        ))
-    return np.asarray(min(results, key=lambda result: result.fun).x)
+    start = starts[np.argmin([problem.objective(theta)[0] for theta in starts])]
+    inward = np.where(start > 0.5 * (low + high), -1.0, 1.0) * np.array([0.4, 0.3, 0.7])
+    simplex = np.clip(np.vstack([start, start + np.diag(inward)]), low, high)
+    found = optimize.minimize(
+        lambda theta: problem.objective(theta)[0], start, method="Nelder-Mead", bounds=problem.bounds,
+        options={"initial_simplex": simplex, "xatol": 0.1, "fatol": 0.1, "maxfev": 60},
+    )
+    return np.asarray(found.x)
 
 
-def _model(problem: _Problem, best: Array, regional_order: int, resolution: float) -> NoiseModel:
-    hessian, slope = _curvature(problem, best)
-    fit = problem.solve(best)
-    range_m, smoothness, ratio = (float(v) for v in np.exp(best))
+def _sample(problem: _Problem, rng: np.random.Generator) -> Sample:
+    """Posterior of the three logarithms; each point carries the ln of its best sill."""
+
+    def density(theta: Array) -> tuple[float, float]:
+        value, log_sill = problem.objective(theta)
+        return -value, log_sill
+
+    return importance_sample(density, _mode(problem), np.diag(_FIRST_SCATTER**2), bounds=problem.bounds, rng=rng,
+                             sizes=_ROUNDS)
+
+
+def _model(
+    problem: _Problem, sample: Sample, regional_order: int, resolution: float, rng: np.random.Generator,
+) -> NoiseModel:
+    centre = sample.mean
+    fit = problem.solve(centre)
+    range_m, smoothness, ratio = (float(v) for v in np.exp(centre))
     sill = math.exp(problem.log_sill(fit))
-    # given theta, σ² is (n − p) σ̂²(theta) over a chi-square: ln σ moves with theta along `slope` and scatters beyond
-    shape = _inverse(hessian)
-    turn = np.vstack([slope, np.eye(3)])
-    turn[3] += slope  # ln nugget = ln sill + ln ratio
-    own = 0.5 / problem.dof * np.outer([1, 0, 0, 1], [1, 0, 0, 1])
-    covariance = turn @ shape @ turn.T + own
+    pick = sample.resample(_KEPT, rng)
+    # given the rest, sill² is (n − p) times its best value over a chi-square: exact, the level has a flat log prior
+    log_sill = sample.extra[pick] - 0.5 * np.log(rng.chisquare(problem.dof, size=_KEPT) / problem.dof)
+    log_range, log_smoothness, log_ratio = sample.points[pick].T
+    posterior = np.column_stack([log_sill, log_range, log_smoothness, log_ratio + log_sill])
     return NoiseModel(
         sill_mgal=sill, range_m=range_m, smoothness=smoothness, nugget_mgal=ratio * sill,
-        regional_order=regional_order, log_covariance=tuple(map(tuple, covariance.tolist())),
+        regional_order=regional_order, posterior=tuple(map(tuple, posterior.tolist())),
         n_points=problem.values.size, log_likelihood=-problem.minus_log_likelihood(fit), resolution_m=resolution,
     )
-
-
-def _curvature(problem: _Problem, best: Array) -> tuple[Array, Array]:
-    """Hessian of minus log posterior and gradient of ln sill, by central differences kept inside the bounds."""
-    step = _HESSIAN_STEP
-    centre = np.clip(best, problem.bounds[:, 0] + step, problem.bounds[:, 1] - step)
-    unit = np.diag(step)
-    middle = problem.objective(centre)[0]
-    up = np.array([problem.objective(centre + u) for u in unit])
-    down = np.array([problem.objective(centre - u) for u in unit])
-    slope = (up[:, 1] - down[:, 1]) / (2.0 * step)
-    hessian = np.diag((up[:, 0] - 2.0 * middle + down[:, 0]) / step**2)
-    for i in range(3):
-        for j in range(i):
-            corners = [centre + s * unit[i] + t * unit[j] for s, t in ((1, 1), (-1, -1), (1, -1), (-1, 1))]
-            same, same_too, cross, cross_too = (problem.objective(corner)[0] for corner in corners)
-            hessian[i, j] = hessian[j, i] = (same + same_too - cross - cross_too) / (4.0 * step[i] * step[j])
-    return hessian, slope
-
-
-def _inverse(hessian: Array) -> Array:
-    """Inverse with eigenvalues held up to those of the widest prior, so that a flat ridge stays a finite one."""
-    values, vectors = np.linalg.eigh(hessian)
-    return (vectors / np.maximum(values, _WIDEST**-2)) @ vectors.T

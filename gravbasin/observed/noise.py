@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -17,10 +17,10 @@ from gravbasin.observed._lattice import Array
 __all__ = ["LOG_NAMES", "NoiseModel", "matern_correlation"]
 
 LOG_NAMES = ("sill", "range", "smoothness", "nugget")
-"""Order of the logarithms in `NoiseModel.log_covariance`."""
+"""Order of the logarithms in `NoiseModel.posterior`."""
 
 SMOOTHNESS_BOUNDS = (0.3, 2.5)
-"""Smoothness that estimates and draws may take: map spectra from k^-2.6 to k^-7."""
+"""Smoothness that estimates may take: map spectra from k^-2.6 to k^-7."""
 
 USER_LEVEL_SCATTER = 0.15
 """Scatter of ln(sill) for a model given without errors (judgement: as far as two masks of one map commonly differ)."""
@@ -74,8 +74,8 @@ class NoiseModel:
         Definition: order (0, 1, 2) of the polynomial regional to estimate jointly with whatever is fitted.
     model : str
         Always "matern".
-    log_covariance : 4 × 4 nested tuple, optional
-        Covariance of ln(sill), ln(range), ln(smoothness), ln(nugget) where the model was estimated.
+    posterior : (n_draw, 4) nested tuple, optional
+        Equally likely values of ln(sill), ln(range), ln(smoothness), ln(nugget) where the model was estimated.
     n_points : int
         Number of nodes the estimate rests on, 0 for a given model.
     log_likelihood : float, optional
@@ -96,7 +96,7 @@ class NoiseModel:
     nugget_mgal: float = 0.0
     regional_order: int = 1
     model: str = "matern"
-    log_covariance: tuple[tuple[float, ...], ...] | None = None
+    posterior: tuple[tuple[float, ...], ...] | None = field(default=None, repr=False)
     n_points: int = 0
     log_likelihood: float | None = None
     resolution_m: float | None = None
@@ -143,9 +143,9 @@ class NoiseModel:
     @property
     def relative_errors(self) -> dict[str, float]:
         """Standard errors of the logarithms (so, relative errors) by name; empty for a given model."""
-        if self.log_covariance is None:
+        if self.posterior is None:
             return {}
-        return {name: math.sqrt(self.log_covariance[i][i]) for i, name in enumerate(LOG_NAMES)}
+        return dict(zip(LOG_NAMES, np.std(self.posterior, axis=0).tolist(), strict=True))
 
     def as_dict(self) -> dict[str, Any]:
         """The model in the units and names of verdict.json; estimated models add their errors and number of nodes."""
@@ -153,7 +153,7 @@ class NoiseModel:
             "model": self.model, "sill_mgal": self.sill_mgal, "range_km": self.range_m / 1e3,
             "smoothness": self.smoothness, "nugget_mgal": self.nugget_mgal, "regional_order": self.regional_order,
         }
-        if self.log_covariance is not None:
+        if self.posterior is not None:
             plain["relative_errors"] = self.relative_errors
             plain["n_points"] = self.n_points
             plain["log_likelihood"] = self.log_likelihood
@@ -164,8 +164,7 @@ class NoiseModel:
     def draws(self, rng: np.random.Generator, n: int, *, level_scatter: float | None = None) -> list[NoiseModel]:
         """Models as plausible as this one, to average a likelihood over.
 
-        Gaussian in the four logarithms (Laplace's approximation about the estimate); smoothness is clipped to the
-        bounds of the estimate. A model given without errors varies in level alone.
+        An estimated model draws from its posterior; a model given without one varies in level alone.
 
         Parameters
         ----------
@@ -174,28 +173,25 @@ class NoiseModel:
         n : int
             Number of models.
         level_scatter : float, optional
-            Least scatter of ln(sill); the nugget moves with it. Default 0.15 for a given model, 0 for an estimate,
-            whose own error is used.
+            Scatter of ln(sill), with which the nugget moves; for an estimate it comes on top of the posterior's.
+            Default 0.15 for a given model, 0 for an estimate.
 
         Returns
         -------
         list of NoiseModel
-            Without log_covariance: a draw is not itself an estimate.
+            Without posterior: a draw is not itself an estimate.
         """
-        estimated = self.log_covariance is not None
-        scatter = (0.0 if estimated else USER_LEVEL_SCATTER) if level_scatter is None else level_scatter
-        covariance = np.array(self.log_covariance) if estimated else np.zeros((4, 4))
-        missing = max(scatter**2 - covariance[0, 0], 0.0)
-        shared = np.array([1.0, 0.0, 0.0, 1.0])
-        covariance = covariance + missing * np.outer(shared, shared)
-        shift = rng.multivariate_normal(np.zeros(4), covariance, size=n, method="eigh")
-        factor = np.exp(shift)
-        low, high = SMOOTHNESS_BOUNDS if estimated else (0.0, 20.0)
+        if level_scatter is None:
+            level_scatter = USER_LEVEL_SCATTER if self.posterior is None else 0.0
+        level = np.exp(level_scatter * rng.standard_normal(n))
+        if self.posterior is None:
+            values = np.tile([self.sill_mgal, self.range_m, self.smoothness, self.nugget_mgal], (n, 1))
+        else:
+            logs = np.array(self.posterior)
+            values = np.exp(logs[rng.choice(len(logs), size=n, replace=n > len(logs))])
+        values[:, [0, 3]] *= level[:, None]
         return [
-            NoiseModel(
-                sill_mgal=self.sill_mgal * f[0], range_m=self.range_m * f[1],
-                smoothness=float(np.clip(self.smoothness * f[2], low, high)), nugget_mgal=self.nugget_mgal * f[3],
-                regional_order=self.regional_order, resolution_m=self.resolution_m,
-            )
-            for f in factor.tolist()
+            replace(self, sill_mgal=sill, range_m=range_m, smoothness=smoothness, nugget_mgal=nugget, posterior=None,
+                    n_points=0, log_likelihood=None)
+            for sill, range_m, smoothness, nugget in values.tolist()
         ]

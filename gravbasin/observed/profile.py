@@ -11,7 +11,7 @@ from scipy import fft, sparse
 
 from gravbasin.discs import ring_fractions
 from gravbasin.errors import InputError
-from gravbasin.labels import data_array, provenance
+from gravbasin.labels import coordinate, data_array, provenance
 from gravbasin.observed._lattice import Array, Disc, Lattice, lattice_of
 from gravbasin.observed.estimate import MIN_NODES, estimate_noise
 from gravbasin.observed.noise import NoiseModel
@@ -305,12 +305,10 @@ def _dataset(rings: RingMeans, standard_error: Array, noise: NoiseModel, exclude
         "area": (rings.area_m2, "m2", "area of the ring that has data"),
     }
     coords = {"radius": rings.radius_m}
-    edges = data_array(rings.edges_m, ("ring_edge",), {"radius_edges": ("ring_edge", rings.edges_m)}, name="edges",
-                       units="m", long_name="edges of the rings")
     return xr.Dataset(
         {name: data_array(values, ("radius",), coords, name=name, units=units, long_name=text)
          for name, (values, units, text) in columns.items()},
-        coords={"radius_edges": edges["radius_edges"]},
+        coords={"radius_edges": coordinate("radius_edges", rings.edges_m)},
         attrs={"title": "ring means of a gravity map", "provenance": provenance(
             centre_m=rings.centre, noise=noise.as_dict(), noise_estimated_outside=excluded,
             empty_rings=int((rings.area_m2 == 0).sum()))},
