@@ -12,6 +12,7 @@ from gravbasin.observed.profile import (
     stencil_axes,
 )
 from gravbasin.observed.quality import NoiseCheck, check_noise
+from gravbasin.observed.readers import read_grid
 from gravbasin.observed.regional import fit_regional, polynomial_basis
 from gravbasin.observed.simulate import simulate_noise
 
@@ -24,6 +25,7 @@ __all__ = [
     "fit_regional",
     "polynomial_basis",
     "radial_profile",
+    "read_grid",
     "ring_covariance",
     "ring_edges",
     "ring_means",

@@ -18,7 +18,7 @@ NEGATIVE_LIMIT = 1e-6
 """Largest negative eigenvalue of the embedding that is set to zero, as a share of the largest eigenvalue."""
 
 MAX_TORUS_NODES = 4096 * 4096
-"""Embeddings above this (0.4 GB of work space) are refused."""
+"""Embeddings above this (about 1 GB of work space) are refused."""
 
 
 def simulate_noise(
