@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from scipy import sparse
 
 from gravbasin.discs import ring_fractions
-from gravbasin.inference.likelihood import RingLikelihood, ring_likelihood
+from gravbasin.inference.likelihood import RingLikelihood, ring_likelihood, shape_scatter
 from gravbasin.inference.response import ring_response
 from gravbasin.observed import NoiseModel, polynomial_basis, ring_covariance, simulate_noise, stencil_axes
 
@@ -54,12 +54,30 @@ class Chance:
 
 @dataclasses.dataclass(frozen=True, eq=False)
 class Stencil:
-    """Complete rings about a grid node, their likelihood and the model's template: one for all centres of a map."""
+    """Complete rings about a grid node, one set for all centres of a map.
+
+    Attributes
+    ----------
+    weights : (n_ring, n_cell) sparse array
+        Ring-mean weights on the stencil's own lattice.
+    shape : (int, int)
+        Nodes of that lattice, northing and easting.
+    covariance : (n_ring, n_ring) array, mGal²
+        Of the ring means under the noise.
+    response : (n_ring, n_radius) array
+        From a radial profile to ring means.
+    templates : (n_ring, 1 + n_draw) array, mGal
+        Ring means of the model and of draws of its scatter.
+    likelihood : RingLikelihood
+        Under noise and shape scatter.
+    """
 
     weights: sparse.csr_array
     shape: tuple[int, int]
+    covariance: Array
+    response: Array
+    templates: Array
     likelihood: RingLikelihood
-    template: Array
 
     @classmethod
     def build(
@@ -69,19 +87,25 @@ class Stencil:
         noise: NoiseModel,
         *,
         radius: Array,
-        profile: Array,
+        profiles: Array,
         resolution: float | None,
     ) -> Stencil:
-        """Rings with these edges (m) on a lattice of this spacing; `profile` (mGal) at `radius` (m) is the model."""
+        """Rings with these edges (m) on a lattice of this spacing (m).
+
+        `profiles` (n_radius, 1 + n_draw), mGal, at `radius` (m) are the model and draws of its scatter.
+        """
         easting, northing = stencil_axes(edges, spacing)
         share = ring_fractions(easting, northing, edges).T.tocsr()
-        weights = sparse.csr_array(sparse.diags_array(1.0 / np.asarray(share.sum(axis=1)).ravel()) @ share)
+        area = np.asarray(share.sum(axis=1)).ravel()
+        weights = sparse.csr_array(sparse.diags_array(1.0 / area) @ share)
         shape = (northing.size, easting.size)
         covariance = ring_covariance(weights, noise, shape=shape, spacing_m=spacing)
         east, north = np.meshgrid(easting, northing)
         basis = polynomial_basis(east, north, noise.regional_order, centre=(0.0, 0.0), scale=float(edges[-1]))
         response = ring_response(weights, np.hypot(east, north), radius, spacing=spacing, resolution=resolution)
-        return cls(weights, shape, ring_likelihood(covariance, weights @ basis), response @ profile)
+        templates = response @ profiles
+        likelihood = ring_likelihood(covariance + shape_scatter(templates, area), weights @ basis)
+        return cls(weights, shape, covariance, response, templates, likelihood)
 
     @property
     def half(self) -> tuple[int, int]:
@@ -165,7 +189,7 @@ def chance_test(
     else:
         data = np.concatenate(list(_random_ring_means(stencil, spacing, noise, centres, seed)), axis=1)
         source, independent = "random fields", float(centres)
-    null = local_statistic(stencil.likelihood, stencil.template, data)
+    null = local_statistic(stencil.likelihood, stencil.templates[:, 0], data)
     exceed = int(np.sum(null >= statistic))
     p = (1 + exceed) / (1 + null.size)
     error = float(np.sqrt(p * (1 - p) / max(min(independent, null.size), 1.0)))

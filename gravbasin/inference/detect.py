@@ -10,7 +10,6 @@ from numpy.typing import NDArray
 from scipy import special, stats
 
 from gravbasin.inference.likelihood import RingLikelihood
-from gravbasin.observed import NoiseModel
 
 __all__ = ["Detectability", "detectability", "detection_probability", "required_snr", "signal_band"]
 
@@ -18,7 +17,7 @@ Array = NDArray[np.float64]
 
 
 def detection_probability(snr: Array | float, false_alarm_probability: float) -> Array:
-    """Probability that a matched filter at a known place, of known shape and sign, passes its threshold.
+    """Probability that a filter at a known place, for a known shape and sign, passes its threshold.
 
     Pd = Phi(SNR - z(1 - Pfa)): Neyman-Pearson for a Gaussian statistic (Kay 1998, from memory).
 
@@ -50,8 +49,7 @@ class Detectability:
     false_alarm_probability : float
         At which it is stated.
     band_km : (float, float)
-        Wavelengths between which the central 80 % of SNR² lies. A band shorter than the map's resolution means
-        that the smoothness of the noise model, not the map, makes the detection.
+        Wavelengths between which the central 80 % of the filter's signal lies.
     """
 
     snr: float
@@ -63,7 +61,8 @@ class Detectability:
 
 
 def detectability(
-    likelihoods: Sequence[RingLikelihood],
+    likelihood: RingLikelihood,
+    noise_covariances: Sequence[Array],
     templates: Array,
     *,
     false_alarm_probability: float,
@@ -73,44 +72,55 @@ def detectability(
 
     Parameters
     ----------
-    likelihoods : sequence of RingLikelihood
-        The first under the best noise model, the others under plausible ones.
-    templates : (n_ring, n_draw) array, mGal
-        Ring means of the model; the first column is the model itself, the others draws of its scatter.
+    likelihood : RingLikelihood
+        Of the ring means under noise and shape scatter: it makes the filter.
+    noise_covariances : sequence of (n_ring, n_ring) arrays, mGal²
+        Noise alone, the first under the best noise model, the others under plausible ones.
+    templates : (n_ring, 1 + n_draw) array, mGal
+        Ring means of the model, then of draws of its scatter.
     false_alarm_probability : float
         Accepted probability of a false alarm.
     band_km : (float, float)
         From `signal_band`.
+
+    Notes
+    -----
+    The filter w is built once, for the model. Its response to a draw is w'y, its noise sqrt(w'Cw): a draw of another
+    shape, or a noise rougher than supposed, is seen as badly as it would be.
     """
-    table = np.array([likelihood.snr(templates) for likelihood in likelihoods])
+    w = likelihood.filter(templates[:, 0])
+    noise = np.array([np.sqrt(w @ covariance @ w) for covariance in noise_covariances])
+    table = (w @ templates)[None, :] / noise[:, None]
     low, high = np.quantile(table, [0.05, 0.95])
     probability = float(np.mean(detection_probability(table, false_alarm_probability)))
     return Detectability(float(table[0, 0]), float(low), float(high), probability, false_alarm_probability, band_km)
 
 
 def signal_band(
-    radius: Array, profile: Array, noise: NoiseModel, *, cell_area: float, resolution: float, share: float = 0.8
+    radius: Array, profile: Array, response_to_profile: Array, *, shortest: float, share: float = 0.8
 ) -> tuple[float, float]:
-    """Wavelengths (km, short and long) between which the central share of SNR² lies.
+    """Wavelengths (km, short and long) between which the central share of a filter's signal lies.
 
     Parameters
     ----------
     radius, profile : (n,) arrays, m and mGal
         The modelled anomaly.
-    noise : NoiseModel
-        Its spectrum, plus the nugget spread over `cell_area` (m²), is the noise.
-    resolution : float, m
-        Half the shortest wavelength the map holds.
+    response_to_profile : (n,) array
+        The filter as a functional of the profile: its signal is `response_to_profile @ profile`.
+    shortest : float, m
+        Shortest wavelength to consider, twice the map's resolution.
 
     Notes
     -----
-    SNR² = (1/2π) ∫ |T(k)|²/P(k) k dk with T the Hankel transform of the profile; regional left out.
+    The profile is split by its Hankel transform, t(r) = (1/2π) ∫ T(k) J0(kr) k dk, and each part sent through the
+    filter.
     """
-    k = np.linspace(0.0, np.pi / resolution, 401)[1:]
-    transform = 2 * np.pi * np.trapezoid(special.j0(np.outer(k, radius)) * profile * radius, radius, axis=1)
-    density = transform**2 / (noise.spectrum(k) + noise.nugget_mgal**2 * cell_area) * k
-    total = np.cumsum(density)
-    if total[-1] == 0.0:
+    k = np.linspace(0.0, 2 * np.pi / shortest, 601)[1:]
+    bessel = special.j0(np.outer(k, radius))
+    transform = 2 * np.pi * np.trapezoid(bessel * profile * radius, radius, axis=1)
+    density = transform * k * (bessel @ response_to_profile)
+    total = np.maximum.accumulate(np.cumsum(density))
+    if not total[-1] > 0.0:
         return (float("nan"), float("nan"))
     edges = np.interp([0.5 - share / 2, 0.5 + share / 2], total / total[-1], k)
     return float(2e-3 * np.pi / edges[1]), float(2e-3 * np.pi / edges[0])

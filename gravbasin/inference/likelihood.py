@@ -10,7 +10,7 @@ from scipy import linalg, stats
 
 from gravbasin.errors import CannotFinish
 
-__all__ = ["Misfit", "RingLikelihood", "ring_likelihood"]
+__all__ = ["Misfit", "RingLikelihood", "ring_likelihood", "shape_scatter", "total_scatter"]
 
 Array = NDArray[np.float64]
 
@@ -64,9 +64,9 @@ class RingLikelihood:
         white = linalg.solve_triangular(self.factor, vectors, lower=True, check_finite=False)
         return np.asarray(white - self.nuisance @ (self.nuisance.T @ white))
 
-    def snr(self, templates: Array) -> Array:
-        """Signal-to-noise ratio of templates at their own amplitude, shape () or (m,)."""
-        return np.sqrt(np.sum(self.whiten(templates) ** 2, axis=0))
+    def filter(self, template: Array) -> Array:
+        """Weights w of the matched filter: w'y estimates the template's amplitude times its power, regional or not."""
+        return np.asarray(linalg.solve_triangular(self.factor, self.whiten(template), lower=True, trans="T"))
 
     def amplitude(self, template: Array, data: Array) -> tuple[float, float]:
         """Best multiple of the template and its standard error, with the regional free."""
@@ -116,3 +116,35 @@ def ring_likelihood(covariance: Array, regional: Array) -> RingLikelihood:
     white = linalg.solve_triangular(factor, regional, lower=True)
     left, size, _ = np.linalg.svd(white, full_matrices=False)
     return RingLikelihood(factor, left[:, size > 1e-6 * size[0]], regional)
+
+
+def total_scatter(templates: Array) -> Array:
+    """Second moment of drawn templates about the model, mGal²: what size laws and contrasts leave open.
+
+    Parameters
+    ----------
+    templates : (n_ring, 1 + n_draw) array, mGal
+        Ring means of the model, then of draws of its scatter.
+    """
+    spread = templates[:, 1:] - templates[:, :1]
+    return np.asarray(spread @ spread.T / max(spread.shape[1], 1))
+
+
+def shape_scatter(templates: Array, area: Array) -> Array:
+    """Scatter of shape alone, mGal²: each draw less its best multiple of the model.
+
+    A filter that counts it as noise does not lean on details of the rim that nobody knows; scatter of amplitude makes
+    a structure no harder to see and is left out.
+
+    Parameters
+    ----------
+    templates : (n_ring, 1 + n_draw) array, mGal
+        Ring means of the model, then of draws of its scatter.
+    area : (n_ring,) array, m²
+        Areas of the rings, the weights by which a draw is compared with the model.
+    """
+    model, draws = templates[:, 0], templates[:, 1:]
+    power = float(area @ model**2)
+    amplitude = (area * model) @ draws / power if power > 0.0 else np.zeros(draws.shape[1])
+    spread = draws - model[:, None] * amplitude
+    return np.asarray(spread @ spread.T / max(draws.shape[1], 1))

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from gravbasin.errors import InputError
 from gravbasin.inference.chance import Chance, Stencil, chance_test, local_statistic
 from gravbasin.inference.detect import Detectability, detectability, signal_band
-from gravbasin.inference.likelihood import Misfit, RingLikelihood, ring_likelihood
+from gravbasin.inference.likelihood import Misfit, RingLikelihood, ring_likelihood, shape_scatter, total_scatter
 from gravbasin.inference.response import ring_response
 from gravbasin.observed import (
     NoiseCheck,
@@ -112,35 +112,34 @@ def noise_of(scenario: Scenario, observed: xr.DataArray | None) -> NoiseModel:
 
 def compare_with_map(scenario: Scenario, modelled: Modelled, observed: xr.DataArray, noise: NoiseModel) -> Comparison:
     """Everything the map says about the modelled structure."""
-    centre = _centre(scenario)
-    resolution = KM * scenario.observed.resolution_km if scenario.observed and scenario.observed.resolution_km else None
-    edges = _ring_edges(scenario, observed)
-    rings = _covered(observed, centre, edges)
+    assert scenario.observed is not None
+    centre, stated = _centre(scenario), scenario.observed.resolution_km
+    resolution = KM * stated if stated else None
+    rings = _covered(observed, centre, _ring_edges(scenario, observed))
     distance = np.hypot(observed.easting.values - centre[0], observed.northing.values[:, None] - centre[1])
     response = ring_response(rings.weights, distance, modelled.radius, spacing=rings.spacing_m, resolution=resolution)
-    template, draws = response @ modelled.profile, response @ modelled.draws.T
-    covariance = rings.covariance(noise)
+    templates = response @ modelled.profiles
+    covariances = [rings.covariance(n) for n in _plausible(scenario, noise)]
     regional_columns = rings.weights @ _regional_basis(observed, centre, noise)
-    likelihood = ring_likelihood(covariance, regional_columns)
-    with_scatter = ring_likelihood(covariance + _scatter(template, draws), regional_columns)
+    likelihood = ring_likelihood(covariances[0] + shape_scatter(templates, rings.area_m2), regional_columns)
+    all_scatter = ring_likelihood(covariances[0] + total_scatter(templates), regional_columns)
+    template = templates[:, 0]
     amplitude, amplitude_error = likelihood.amplitude(template, rings.mean)
-    seen = _detectability(scenario, modelled, noise, rings, regional_columns, likelihood, template, draws)
-    chance = _chance(scenario, modelled, observed, noise, rings, resolution, likelihood, template)
-    estimated = noise.n_points > 0
+    shortest = 2 * (resolution or max(rings.spacing_m))
     exclude = (*centre, MASK_IN_DIAMETERS * _diameter(scenario))
     return Comparison(
         noise=noise,
-        noise_check=check_noise(observed, noise, exclude=exclude) if estimated else None,
+        noise_check=check_noise(observed, noise, exclude=exclude) if noise.n_points else None,
         rings=rings,
         template=template,
-        template_draws=draws,
-        regional=with_scatter.fitted_regional(rings.mean - template),
-        standard_error=np.sqrt(np.diag(covariance)),
-        detectability=seen,
-        misfit=with_scatter.misfit(template, rings.mean),
+        template_draws=templates[:, 1:],
+        regional=all_scatter.fitted_regional(rings.mean - template),
+        standard_error=np.sqrt(np.diag(covariances[0])),
+        detectability=_seen(scenario, modelled, likelihood, covariances, templates, response, shortest),
+        misfit=all_scatter.misfit(template, rings.mean),
         amplitude=amplitude,
         amplitude_error=amplitude_error,
-        chance=chance,
+        chance=_chance(scenario, modelled, observed, noise, rings, resolution, likelihood, template),
         maps=_maps(observed, noise, modelled, distance, exclude),
     )
 
@@ -150,17 +149,43 @@ def detect_without_map(scenario: Scenario, modelled: Modelled, noise: NoiseModel
     spacing = KM * scenario.inference.station_spacing_km
     reach = max(scenario.inference.outer_radius_in_diameters * _diameter(scenario), LEAST_RINGS * spacing)
     edges = spacing * np.arange(int(np.ceil(reach / spacing)) + 1.0)
-    models = [noise, *noise.draws(np.random.default_rng([scenario.seed, 2]), scenario.inference.noise_draws)]
-    profiles = np.column_stack([modelled.profile, *modelled.draws])
     stencils = [
-        Stencil.build(edges, (spacing, spacing), n, radius=modelled.radius, profile=profiles, resolution=None)
-        for n in models
+        Stencil.build(edges, (spacing, spacing), n, radius=modelled.radius, profiles=modelled.profiles, resolution=None)
+        for n in _plausible(scenario, noise)
     ]
+    best = stencils[0]
+    return _seen(
+        scenario,
+        modelled,
+        best.likelihood,
+        [s.covariance for s in stencils],
+        best.templates,
+        best.response,
+        2 * spacing,
+    )
+
+
+def _plausible(scenario: Scenario, noise: NoiseModel) -> list[NoiseModel]:
+    """The best noise model, then others as plausible: level, range, smoothness and nugget are all uncertain."""
+    return [noise, *noise.draws(np.random.default_rng([scenario.seed, 2]), scenario.inference.noise_draws)]
+
+
+def _seen(
+    scenario: Scenario,
+    modelled: Modelled,
+    likelihood: RingLikelihood,
+    covariances: list[Array],
+    templates: Array,
+    response: Array,
+    shortest: float,
+) -> Detectability:
+    functional = likelihood.filter(templates[:, 0]) @ response
     return detectability(
-        [s.likelihood for s in stencils],
-        stencils[0].template,
+        likelihood,
+        covariances,
+        templates,
         false_alarm_probability=scenario.inference.false_alarm_probability,
-        band_km=signal_band(modelled.radius, modelled.profile, noise, cell_area=spacing**2, resolution=spacing),
+        band_km=signal_band(modelled.radius, modelled.profile, functional, shortest=shortest),
     )
 
 
@@ -201,42 +226,6 @@ def _regional_basis(observed: xr.DataArray, centre: tuple[float, float], noise: 
     return polynomial_basis(east, north, noise.regional_order, centre=centre, scale=scale)
 
 
-def _scatter(template: Array, draws: Array) -> Array:
-    """Second moment of the draws about the model: what size laws and contrasts leave open."""
-    if draws.shape[1] == 0:
-        return np.zeros((template.size, template.size))
-    spread = draws - template[:, None]
-    return np.asarray(spread @ spread.T / draws.shape[1])
-
-
-def _detectability(
-    scenario: Scenario,
-    modelled: Modelled,
-    noise: NoiseModel,
-    rings: RingMeans,
-    regional: Array,
-    likelihood: RingLikelihood,
-    template: Array,
-    draws: Array,
-) -> Detectability:
-    others = noise.draws(np.random.default_rng([scenario.seed, 2]), scenario.inference.noise_draws)
-    likelihoods = [likelihood, *(ring_likelihood(rings.covariance(n), regional) for n in others)]
-    step_n, step_e = rings.spacing_m
-    stated = scenario.observed.resolution_km if scenario.observed else None
-    return detectability(
-        likelihoods,
-        np.column_stack([template, draws]),
-        false_alarm_probability=scenario.inference.false_alarm_probability,
-        band_km=signal_band(
-            modelled.radius,
-            modelled.profile,
-            noise,
-            cell_area=step_n * step_e,
-            resolution=KM * stated if stated else max(rings.spacing_m),
-        ),
-    )
-
-
 def _chance(
     scenario: Scenario,
     modelled: Modelled,
@@ -250,13 +239,18 @@ def _chance(
     if scenario.inference.chance_centres == 0:
         return None
     stencil = Stencil.build(
-        rings.edges_m, rings.spacing_m, noise, radius=modelled.radius, profile=modelled.profile, resolution=resolution
+        rings.edges_m,
+        rings.spacing_m,
+        noise,
+        radius=modelled.radius,
+        profiles=modelled.profiles,
+        resolution=resolution,
     )
-    at_structure = float(local_statistic(likelihood, template, rings.mean[:, None])[0])
+    at_structure = local_statistic(likelihood, template, rings.mean[:, None])
     return chance_test(
         observed,
         stencil,
-        at_structure,
+        float(at_structure[0]),
         centre=_centre(scenario),
         exclude_radius=_diameter(scenario),
         centres=scenario.inference.chance_centres,

@@ -70,6 +70,11 @@ class Modelled:
     audit: Audit
 
     @property
+    def profiles(self) -> Array:
+        """The model's profile and its draws as columns, (n_radius, 1 + n_draw), mGal."""
+        return np.column_stack([self.profile, *self.draws])
+
+    @property
     def peak(self) -> float:
         """Largest anomaly by size, with its sign, mGal."""
         return float(self.profile[np.argmax(np.abs(self.profile))])
