@@ -9,7 +9,6 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike
 from scipy import special
-from scipy.interpolate import CubicSpline
 
 from gravbasin.errors import InputError
 from gravbasin.observed._lattice import Array
@@ -42,6 +41,8 @@ def matern_correlation(distance_m: ArrayLike, *, range_m: float, smoothness: flo
     largest = float(distance.max())
     if not smallest < largest:
         return _matern(distance * scale, smoothness)
+    from scipy.interpolate import CubicSpline  # slow to import
+
     count = int(math.log(largest / smallest) / _TABLE_STEP) + 8
     nodes = np.linspace(math.log(smallest), math.log(largest), count)
     spline = CubicSpline(nodes, _matern(np.exp(nodes) * scale, smoothness))

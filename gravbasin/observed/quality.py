@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import xarray as xr
-from scipy import linalg, stats
+from scipy import linalg
 
 from gravbasin.errors import InputError
 from gravbasin.observed._gls import covariance_of, whiten
@@ -81,6 +81,8 @@ def check_noise(
     form of the leave-one-out identity, common practice), so no block needs its own fit. The sum T = y'P D P y with
     D = blockdiag(P_BB⁻¹) has mean tr(DP) = n and variance 2 tr((DP)²).
     """
+    from scipy import stats  # slow to import
+
     where = "check_noise"
     if blocks < 2:
         raise InputError("blocks", blocks, "must be 2 or more", "6 is usual", where)
