@@ -32,15 +32,18 @@ class Crater(_Table):
         "crystalline", description="what was hit: crystalline basement, thick sediments, or sediments over basement"
     )
     cover_thickness_km: NotNegative = Field(0.0, description="sediments over the basement at impact, km (mixed only)")
-    setting: Literal["land", "marine"] = Field(
-        "land", description="where it formed; sea water seals breccia and fractures early"
+    setting: Literal["land", "marine", "hydrothermal"] = Field(
+        "land", description="what sealed its cracks: nothing but age, sea water, or long-lived hot water"
     )
     age_myr: Positive | None = Field(None, description="age of the impact, million years; needed with an erosion rate")
     transient_law: Literal["collapse scaling", "shallow exponent"] = Field(
         "collapse scaling", description="law from rim to transient diameter (see crater_dimensions)"
     )
-    uplift_law: Literal["stratigraphic", "shield"] = Field(
-        "stratigraphic", description="law of structural uplift; the two differ by a factor of two"
+    depth_law: Literal["paraboloid", "shield"] = Field(
+        "paraboloid", description="law of transient depth: from the transient or from the rim diameter"
+    )
+    uplift_law: Literal["stratigraphic", "early stratigraphic", "shield"] = Field(
+        "stratigraphic", description="law of structural uplift; shield gives twice the others"
     )
     melt_coefficient: float = Field(2e-4, ge=1e-6, le=1e-3, description="c of melt volume = c Dtc^3.85, km³")
 
@@ -51,6 +54,7 @@ class Dimensions(_Table):
     transient_diameter_km: Positive | None = Field(None, description="diameter of the transient cavity, km")
     transient_depth_km: Positive | None = Field(None, description="depth of the transient cavity, km")
     apparent_depth_km: NotNegative | None = Field(None, description="original ground to the top of the impact fill, km")
+    rim_height_km: NotNegative | None = Field(None, description="height of the fresh rim above the ground, km")
     peak_height_km: NotNegative | None = Field(None, description="central peak or peak ring above the fill, km")
     structural_uplift_km: NotNegative | None = Field(None, description="rise of rock below the centre of the floor, km")
     central_uplift_diameter_km: Positive | None = Field(None, description="base of the central uplift, km")
@@ -58,6 +62,7 @@ class Dimensions(_Table):
     melt_volume_km3: NotNegative | None = Field(None, description="volume of the melt sheet, km³")
     melt_diameter_km: Positive | None = Field(None, description="diameter of the melt sheet, km")
     breccia_thickness_km: NotNegative | None = Field(None, description="thickness of the breccia lens, km")
+    suevite_thickness_km: NotNegative | None = Field(None, description="melt-bearing top of the breccia lens, km")
     fracture_base_km: Positive | None = Field(None, description="depth below the floor at which fractures end, km")
     moho_uplift_km: NotNegative | None = Field(None, description="rise of the Moho below the centre, km")
 
@@ -68,28 +73,25 @@ class Layer(_Table):
     top_km: NotNegative = Field(description="top of the layer below the ground before impact, km")
     density_kg_m3: Density = Field(description="density at the top of the layer, kg/m³")
     gradient_kg_m3_per_km: float = Field(0.0, ge=-100, le=300, description="increase of density with depth, kg/m³/km")
-
-
-def _shield_column() -> tuple[Layer, ...]:
-    return (
-        Layer(top_km=0.0, density_kg_m3=2680.0, gradient_kg_m3_per_km=10.0),
-        Layer(top_km=20.0, density_kg_m3=2880.0, gradient_kg_m3_per_km=5.0),
-    )
+    porosity: float = Field(0.0, ge=0, le=0.7, description="porosity before impact, 0-1; porous rock opens less")
 
 
 class Background(_Table):
     """The density column of the target before impact: crustal layers, Moho, mantle."""
 
     layers: tuple[Layer, ...] = Field(
-        default_factory=_shield_column, min_length=1, description="crustal layers from the ground down"
+        (), description="crustal layers from the ground down; by default a column that suits crater.target_rock"
     )
     moho_km: float = Field(35.0, gt=5, le=90, description="depth of the Moho before impact, km")
     mantle_density_kg_m3: Density = Field(3300.0, description="density below the Moho, kg/m³")
     cover_density_kg_m3: Density = Field(2450.0, description="density of the sedimentary cover (mixed targets), kg/m³")
+    cover_porosity: float | None = Field(
+        None, ge=0, le=0.7, description="porosity of that cover, 0-1; by default from its density, grains 2700 kg/m³"
+    )
 
     @model_validator(mode="after")
     def _ordered(self) -> Background:
-        tops = [layer.top_km for layer in self.layers]
+        tops = [layer.top_km for layer in self.layers] or [0.0]
         if tops[0] != 0:
             raise ValueError(f"the first layer must start at 0 km, not {tops[0]:g}; set its top_km to 0")
         if any(b <= a for a, b in pairwise(tops)):
@@ -110,7 +112,10 @@ class Damage(_Table):
     closure_pressure_mpa: Positive = Field(200.0, description="pressure of the rock column that closes cracks, MPa")
     pressure_exponent: Positive = Field(1.0, description="exponent n of the pressure form (1 - P/Pc)^n")
     retention: float | None = Field(
-        None, gt=0, le=1, description="share of fracture porosity not sealed since; 1 on land, 0.25 marine by default"
+        None, gt=0, le=1, description="share of fracture porosity not sealed since; by default from setting and age"
+    )
+    crossover_porosity: float = Field(
+        0.07, gt=0, le=1, description="porosity before impact at which shock closes as much as it opens"
     )
     core_suppression: float | None = Field(
         None,
@@ -118,7 +123,9 @@ class Damage(_Table):
         le=1,
         description="share of porosity missing in the core of the uplift; by default from the diameter",
     )
-    pore_fluid: Literal["fresh water", "sea water", "dry"] = Field("fresh water", description="what fills the pores")
+    pore_fluid: Literal["fresh water", "sea water", "dry"] | None = Field(
+        None, description="what fills the pores; by default fresh water, sea water where the setting is marine"
+    )
 
 
 class Fill(_Table):
@@ -126,13 +133,19 @@ class Fill(_Table):
 
     breccia_contrast_kg_m3: Contrast = Field(-270.0, description="breccia minus intact target, kg/m³")
     breccia_retention: float | None = Field(
-        None, gt=0, le=1, description="share of the breccia contrast not sealed since; 1 on land, 0.1 marine by default"
+        None, gt=0, le=1, description="share of the breccia contrast not sealed since; by default from setting and age"
     )
+    suevite_contrast_kg_m3: Contrast = Field(-450.0, description="melt-bearing breccia minus intact target, kg/m³")
     melt_contrast_kg_m3: Contrast = Field(-80.0, description="melt rock minus intact target, kg/m³")
+    melt_layering_kg_m3: float = Field(
+        0.0, ge=0, le=500, description="lower minus upper half of a differentiated melt sheet, kg/m³; 0 for a plain one"
+    )
     hollow: Literal["sediment", "water", "air"] = Field(
         "sediment", description="what fills the hollow left above the impact rocks; air counts as corrected terrain"
     )
-    sediment_density_kg_m3: Density = Field(2300.0, description="density of sediment in the hollow, kg/m³")
+    sediment_density_kg_m3: Density | None = Field(
+        None, description="density of sediment in the hollow, kg/m³; by default 2300, or by age where that is known"
+    )
     lithology: Literal["shale", "sand", "chalk", "shaly sand", "platform carbonate"] | None = Field(
         None, description="compact the sediment by this lithology's curve instead of sediment_density_kg_m3"
     )
@@ -161,6 +174,10 @@ class History(_Table):
     burial_km: NotNegative = Field(0.0, description="sediment laid over the eroded surface, km")
     events: tuple[Event, ...] = Field((), description="episodes in order, instead of erosion_km and burial_km")
     cover_density_kg_m3: Density = Field(2400.0, description="density of the burying sediment, kg/m³")
+    rebound_elastic_thickness_km: float | None = Field(
+        None, gt=0, le=200, description="elastic thickness of a plate that rebounds, km; by default no rebound"
+    )
+    eroded_radius_km: Positive = Field(250.0, description="radius of the region that was eroded (rebound only), km")
 
     @model_validator(mode="after")
     def _one_way(self) -> History:

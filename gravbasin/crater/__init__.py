@@ -1,8 +1,9 @@
 """The structure: size laws, target column, displacement, damage, fill, history, and the section assembled from them."""
 
+from gravbasin.crater.cells import PARTS, Mesh, contrast, contrast_parts, default_mesh, shared_mesh
 from gravbasin.crater.dimensions import CraterDimensions, crater_dimensions
 from gravbasin.crater.model import CraterModel, crater_model
-from gravbasin.crater.section import PARTS, UNITS, Mesh, contrast_parts, default_mesh, density_section, section_parts
+from gravbasin.crater.section import UNITS, density_section, section_parts
 
 __all__ = [
     "PARTS",
@@ -10,10 +11,12 @@ __all__ = [
     "CraterDimensions",
     "CraterModel",
     "Mesh",
+    "contrast",
     "contrast_parts",
     "crater_dimensions",
     "crater_model",
     "default_mesh",
     "density_section",
     "section_parts",
+    "shared_mesh",
 ]

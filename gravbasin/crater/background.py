@@ -1,4 +1,4 @@
-"""The density column of the target before impact, its integrals and its pressure."""
+"""The density column of the target before impact and its integrals."""
 
 from __future__ import annotations
 
@@ -8,11 +8,30 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from gravbasin.constants import STANDARD_GRAVITY
-
-__all__ = ["Column"]
+__all__ = ["GRAIN_DENSITY", "PORE_DEFICIT", "PRESETS", "Column", "saturated_porosity"]
 
 Array = NDArray[np.float64]
+
+GRAIN_DENSITY = 2700.0
+"""Grains of mixed sediments, kg/m³: quartz 2650, calcite 2710, dolomite 2870, clays 2600-2800 (from memory)."""
+
+PORE_DEFICIT = GRAIN_DENSITY - 1000.0
+"""Mass missing per volume of water-filled pores, kg/m³."""
+
+
+def saturated_porosity(density: float) -> float:
+    """Porosity of a water-filled sediment from its bulk density (kg/m³), 0-1; 0 where it is as dense as its grains."""
+    return min(max((GRAIN_DENSITY - density) / PORE_DEFICIT, 0.0), 1.0)
+
+
+_SHIELD = ((0.0, 2680.0, 10.0, 0.0), (20.0, 2880.0, 5.0, 0.0))
+_BASIN = tuple((top, 2400.0 + 50.0 * top, 50.0, saturated_porosity(2425.0 + 50.0 * top)) for top in range(5))
+
+PRESETS = {"crystalline": _SHIELD, "mixed": _SHIELD, "sedimentary": (*_BASIN, (5.0, 2730.0, 10.0, 0.0), _SHIELD[1])}
+"""Layers by target rock: top (km), density there (kg/m³), gradient (kg/m³/km), porosity before impact.
+
+Shield: 2.67-2.72 at the top, 8-12 kg/m³ per km (Christensen & Mooney 1995, from memory). Sedimentary: sandstone and
+shale at the top (2.35-2.40) to compacted rock of 2.65 at 5 km, basement below (Telford et al. 1990, from memory)."""
 
 
 @dataclasses.dataclass(frozen=True)
@@ -31,6 +50,8 @@ class Column:
         Depth of the crust-mantle boundary.
     mantle_density : float, kg/m³
         Density below it.
+    porosities : tuple of float
+        Porosity of each layer before impact (0-1); empty for none.
     """
 
     tops: tuple[float, ...]
@@ -38,6 +59,44 @@ class Column:
     gradients: tuple[float, ...]
     moho: float
     mantle_density: float
+    porosities: tuple[float, ...] = ()
+
+    @cached_property
+    def top_density(self) -> float:
+        """Density at the ground, kg/m³."""
+        return self.densities[0]
+
+    @cached_property
+    def _ramps(self) -> tuple[tuple[float, float, float], ...]:
+        """Depth, jump of density and half the jump of gradient wherever the crust departs from its top density."""
+        tops, rho, slope, _ = self._cumulative
+        above = rho[:-1] + slope[:-1] * np.diff(tops)  # density just above the next knot
+        jumps = np.concatenate([[0.0], rho[1:] - above])
+        bends = np.diff(slope, prepend=0.0)
+        return tuple((float(t), float(j), 0.5 * float(b)) for t, j, b in zip(tops, jumps, bends, strict=True))
+
+    def excess_mass(self, depth: ArrayLike) -> Array:
+        """Integral of `crust_density` minus the density at the ground, kg/m²: exactly zero for a flat column."""
+        z = np.asarray(depth, dtype=float)
+        total = np.zeros_like(z)
+        for top, jump, bend in self._ramps:
+            if jump or bend:
+                inside = np.maximum(z - top, 0.0)
+                total += inside * (jump + bend * inside)
+        return total
+
+    def porosity(self, depth: ArrayLike) -> Array:
+        """Porosity before impact, 0-1."""
+        z = np.asarray(depth, dtype=float)
+        if not any(self.porosities):
+            return np.zeros_like(z)
+        steps = np.diff(self.porosities, prepend=0.0)
+        steps[0] = 0.0
+        total = np.full_like(z, self.porosities[0])
+        for top, step in zip(self.tops, steps, strict=True):
+            if step:
+                total += step * (z >= top)
+        return total
 
     @cached_property
     def _cumulative(self) -> tuple[Array, Array, Array, Array]:
@@ -74,9 +133,3 @@ class Column:
         inside = z - tops[layer]
         # Above the ground the top density goes on, without its gradient.
         return np.asarray(mass[layer] + rho[layer] * inside + 0.5 * slope[layer] * np.maximum(inside, 0.0) ** 2)
-
-    def pressure(self, depth: ArrayLike) -> Array:
-        """Weight of the rock column above a depth, Pa; zero above the ground."""
-        z = np.maximum(np.asarray(depth, dtype=float), 0.0)
-        mantle = self.moho_contrast * np.maximum(z - self.moho, 0.0)
-        return STANDARD_GRAVITY * (self.crust_mass(z) + mantle)

@@ -3,31 +3,25 @@
 from __future__ import annotations
 
 import dataclasses
+import math
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy.special import erf
 
 __all__ = ["Displacement"]
 
 Array = NDArray[np.float64]
 
 
-def _hump(radius: Array, core: float) -> Array:
-    return np.exp(-((radius / core) ** 2))
-
-
-def _hump_volume(core: float) -> float:
-    return float(np.pi * core**2)
-
-
 def _annulus(radius: Array, crest: float, width: float) -> Array:
-    return np.exp(-(((radius - crest) / width) ** 2))
+    """A ring of unit height; a hump on the axis when its crest is 0."""
+    x = (radius - crest) / width
+    return np.exp(-x * x)
 
 
 def _annulus_volume(crest: float, width: float) -> float:
     x = crest / width
-    return float(np.pi * width * (width * np.exp(-(x**2)) + crest * np.sqrt(np.pi) * (1 + erf(x))))
+    return math.pi * width * (width * math.exp(-(x**2)) + crest * math.sqrt(math.pi) * (1 + math.erf(x)))
 
 
 @dataclasses.dataclass(frozen=True)
@@ -36,7 +30,8 @@ class Displacement:
 
     The core rises, collapses outward into a peak ring in large craters, and a ring syncline subsides so that at every
     depth the volume that rose equals the volume that sank: rock is moved, not made. Structural uplift fades linearly
-    from the floor to `base`; the Moho rises by `moho_rise`, in the same field, so that nothing is counted twice.
+    from the floor to `base`. The Moho rises by `moho_rise` within its own moat, and the crust above follows it in the
+    same field, less and less towards the ground, so that nothing is counted twice.
 
     Attributes
     ----------
@@ -55,9 +50,11 @@ class Displacement:
     rim_radius, rim_width, rim_rise : float, m
         Uplift of the target under the rim.
     syncline_radius, syncline_width : float, m
-        Trough of the ring syncline and of the moat of the Moho.
-    moho, moho_rise : float, m
-        Depth of the Moho before impact and its rise below the centre.
+        Trough of the ring syncline.
+    moho, moho_rise, moho_radius : float, m
+        Depth of the Moho before impact, its rise below the centre, and the radius at which that has fallen to 1/e.
+    moat_radius, moat_width : float, m
+        Trough of the Moho around its rise.
     """
 
     rise: float
@@ -75,6 +72,9 @@ class Displacement:
     syncline_width: float
     moho: float
     moho_rise: float
+    moho_radius: float
+    moat_radius: float
+    moat_width: float
 
     def net_rise(self, depth: ArrayLike, radius: ArrayLike) -> Array:
         """Net rise on the lattice of depths and radii.
@@ -91,31 +91,34 @@ class Displacement:
         (n_depth, n_radius) array, m
             Positive where rock has risen.
         """
-        z = np.asarray(depth, dtype=float)
-        r = np.asarray(radius, dtype=float)
-        core, ring, rim, trough = self._vertical(z)
-        return np.asarray(
-            np.outer(core, _hump(r, self.core_radius))
-            + np.outer(ring, _annulus(r, self.ring_radius, self.ring_width))
-            + np.outer(rim, _annulus(r, self.rim_radius, self.rim_width))
-            - np.outer(trough, _annulus(r, self.syncline_radius, self.syncline_width))
-        )
+        across = np.stack([_annulus(np.asarray(radius, dtype=float), *form) for form in self._forms])
+        return np.asarray(self._amplitudes(np.asarray(depth, dtype=float)) @ across)
 
     def steepest(self) -> float:
-        """Largest decrease of the core's rise per metre of depth; rock would turn over at 1."""
+        """Largest decrease of the rise per metre of depth below the centre; rock would turn over at 1."""
         z = np.linspace(self.floor, max(self.base, self.floor + 1.0), 400)
-        amplitude = self._vertical(z)[0]
-        return float(np.max(-np.diff(amplitude) / np.diff(z)))
+        return float(np.max(-np.diff(self._amplitudes(z)[:, 0]) / np.diff(z)))
 
-    def _vertical(self, z: Array) -> tuple[Array, Array, Array, Array]:
+    @property
+    def _forms(self) -> tuple[tuple[float, float], ...]:
+        """Crest and width of each radial form: core, ring, rim, syncline, Moho, moat."""
+        return (
+            (0.0, self.core_radius),
+            (self.ring_radius, self.ring_width),
+            (self.rim_radius, self.rim_width),
+            (self.syncline_radius, self.syncline_width),
+            (0.0, self.moho_radius),
+            (self.moat_radius, self.moat_width),
+        )
+
+    def _amplitudes(self, z: Array) -> Array:
+        """Height of each radial form at every depth, (n_depth, 6) m; both troughs take back what rose."""
+        volume = [_annulus_volume(*form) for form in self._forms]
         fade = np.clip((self.base - z) / max(self.base - self.floor, 1.0), 0.0, 1.0)
-        structural = self.rise * fade
-        moho = self.moho_rise * np.maximum(1.0 - np.abs(z - self.moho) / self.moho, 0.0)
+        structural, rim = self.rise * fade, self.rim_rise * fade
         collapse = self.ring_share * np.exp(-np.maximum(z - self.floor, 0.0) / self.ring_depth)
-        core = structural * (1.0 - collapse) + moho
-        hump, crest = _hump_volume(self.core_radius), _annulus_volume(self.ring_radius, self.ring_width)
-        ring = structural * collapse * hump / crest
-        rim = self.rim_rise * fade
-        risen = core * hump + ring * crest + rim * _annulus_volume(self.rim_radius, self.rim_width)
-        trough = risen / _annulus_volume(self.syncline_radius, self.syncline_width)
-        return core, ring, rim, trough
+        core = structural * (1.0 - collapse)
+        ring = structural * collapse * (volume[0] / volume[1])
+        syncline = -(structural * volume[0] + rim * volume[2]) / volume[3]
+        moho = self.moho_rise * np.maximum(1.0 - np.abs(z - self.moho) / self.moho, 0.0)
+        return np.stack([core, ring, rim, syncline, moho, -moho * volume[4] / volume[5]], axis=-1)

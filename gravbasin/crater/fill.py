@@ -1,14 +1,16 @@
-"""Rocks within the crater: the hollow, the melt sheet, the breccia lens, and sediment that compacts."""
+"""Rocks within the crater: the hollow, suevite, the melt sheet, the breccia lens, and sediment that compacts."""
 
 from __future__ import annotations
 
 import dataclasses
-from typing import Literal
+import math
+from functools import cached_property
+from typing import Literal, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["LITHOLOGIES", "Compaction", "Fill"]
+__all__ = ["LITHOLOGIES", "Compaction", "Fill", "Interfaces", "lithified_density"]
 
 Array = NDArray[np.float64]
 
@@ -47,17 +49,37 @@ LITHOLOGIES = {
 """Curves of Sclater & Christie 1980, the carbonate of Schmoker & Halley 1982; grain densities from memory."""
 
 
+def lithified_density(age_myr: float | None) -> float:
+    """Density of sediment in a hollow when only its age is known, kg/m³.
+
+    2000 at 1 Myr (alluvium 1.98), 2500 at 1 Gyr (mean of sandstone, shale, limestone and dolomite; Telford et al.
+    1990, from memory), evenly in the logarithm of age between by choice; 2300 without an age.
+    """
+    if age_myr is None:
+        return 2300.0
+    return 2000.0 + 500.0 * min(max(math.log10(max(age_myr, 1.0)) / 3.0, 0.0), 1.0)
+
+
 def _fade(radius: Array, inner: float, outer: float) -> Array:
     """1 within `inner`, 0 beyond `outer`, a cosine between."""
     x = np.clip((radius - inner) / (outer - inner), 0.0, 1.0)
     return 0.5 * (1.0 + np.cos(np.pi * x))
 
 
+class Interfaces(NamedTuple):
+    """Bases of the hollow, of suevite, melt sheet and breccia (the floor): depth below the ground before impact, m."""
+
+    hollow: Array
+    suevite: Array
+    melt: Array
+    floor: Array
+
+
 @dataclasses.dataclass(frozen=True)
 class Fill:
     """Shape and density of everything between the ground before impact and the crater floor.
 
-    From the top: the hollow with what filled it, the melt sheet, the breccia lens; then the floor.
+    From the top: the hollow with what filled it, suevite, the melt sheet, the breccia lens; then the floor.
 
     Attributes
     ----------
@@ -68,15 +90,21 @@ class Fill:
     apparent_depth, peak_height : float, m
         Depth of the hollow below the ground before impact, and of peak or peak ring above that hollow's floor.
     peak_radius, peak_width : float, m
-        Crest of the peak ring (0 for a central peak) and half-width of peak or ring.
+        Crest of the peak ring (0 for a central peak) and half-width of peak or ring at 1/e of its height.
     melt_volume : float, m³
         Volume of the melt sheet, conserved whatever its shape.
     melt_radius : float, m
         Radius of the melt sheet.
     breccia_thickness : float, m
-        Thickness of the breccia lens away from the peak.
-    breccia_contrast, melt_contrast : float, kg/m³
-        Density minus that of intact target at the same depth.
+        Thickness of suevite and breccia together away from the peak.
+    suevite_thickness, suevite_radius : float, m
+        Thickness and radius of the melt-bearing top of the breccia.
+    breccia_contrast, suevite_contrast, melt_contrast : float, kg/m³
+        Density minus that of intact, dense target at the same depth.
+    breccia_crossover, suevite_crossover : float
+        Porosity before impact (0-1) of target rock as light as the breccia or suevite made of it.
+    melt_layering : float, kg/m³
+        Density of the lower minus the upper half of a differentiated melt sheet; its mean stays `melt_contrast`.
     hollow : str
         "sediment", "water" or "air" (air counts as terrain that the Bouguer reduction has corrected).
     sediment_density : float, kg/m³
@@ -94,45 +122,52 @@ class Fill:
     melt_volume: float
     melt_radius: float
     breccia_thickness: float
+    suevite_thickness: float
+    suevite_radius: float
     breccia_contrast: float
+    suevite_contrast: float
     melt_contrast: float
+    breccia_crossover: float
+    suevite_crossover: float
+    melt_layering: float
     hollow: Literal["sediment", "water", "air"]
     sediment_density: float
     compaction: Compaction | None = None
 
-    def _bowl(self, radius: Array, flat: float, rim: float) -> Array:
-        if self.simple:
-            return np.maximum(1.0 - (radius / self.rim_radius) ** 2, 0.0)
-        return _fade(radius, flat * self.rim_radius, rim * self.rim_radius)
-
-    def _peak(self, radius: Array) -> Array:
-        return np.exp(-(((radius - self.peak_radius) / self.peak_width) ** 2))
-
-    def hollow_base(self, radius: Array) -> Array:
-        """Depth of the hollow's floor below the ground before impact, m."""
-        return np.maximum(
-            self.apparent_depth * self._bowl(radius, 0.8, 1.0) - self.peak_height * self._peak(radius), 0.0
-        )
+    def interfaces(self, radius: Array) -> Interfaces:
+        """Bases of the units along the radius, m."""
+        peak, bowl = self._peak(radius), self._bowl(radius, 0.8)
+        hollow = np.maximum(self.apparent_depth * bowl - self.peak_height * peak, 0.0)
+        # On the peak the breccia is thin: it slid off.
+        thin = 1.0 - 0.8 * peak
+        lens = self.breccia_thickness * self._bowl(radius, 0.5) * thin
+        suevite = self.suevite_thickness * _fade(radius, 0.8 * self.suevite_radius, self.suevite_radius) * thin
+        suevite = hollow + np.minimum(suevite, lens)
+        melt = suevite + self.melt_thickness(radius)
+        return Interfaces(hollow, suevite, melt, melt + hollow + lens - suevite)
 
     def melt_thickness(self, radius: Array) -> Array:
         """Thickness of the melt sheet, m; it thins over the peak and keeps its volume."""
         if self.melt_volume == 0.0:
             return np.zeros_like(radius)
-        fine = (np.arange(2000) + 0.5) / 2000 * self.melt_radius
-        volume = 2 * np.pi * np.sum(self._melt_shape(fine) * fine) * self.melt_radius / 2000
-        return self.melt_volume / volume * self._melt_shape(radius)
+        return self.melt_volume / self._melt_unit_volume * self._melt_shape(radius)
+
+    @cached_property
+    def _melt_unit_volume(self) -> float:
+        """Volume under the melt sheet's shape of unit height, m³."""
+        fine = (np.arange(400) + 0.5) / 400 * self.melt_radius
+        return float(2 * np.pi * np.sum(self._melt_shape(fine) * fine) * self.melt_radius / 400)
 
     def _melt_shape(self, radius: Array) -> Array:
-        peak = 0.0 if self.simple else self._peak(radius)
-        return _fade(radius, 0.8 * self.melt_radius, self.melt_radius) * (1.0 - peak)
+        return _fade(radius, 0.8 * self.melt_radius, self.melt_radius) * (1.0 - self._peak(radius))
 
-    def breccia_base_thickness(self, radius: Array) -> Array:
-        """Thickness of the breccia lens, m; thin on the peak, gone at the rim."""
-        peak = 0.0 if self.simple else 0.8 * self._peak(radius)
-        return self.breccia_thickness * self._bowl(radius, 0.5, 1.0) * (1.0 - peak)
+    def _bowl(self, radius: Array, flat: float) -> Array:
+        if self.simple:
+            return np.maximum(1.0 - (radius / self.rim_radius) ** 2, 0.0)
+        return _fade(radius, flat * self.rim_radius, self.rim_radius)
 
-    def interfaces(self, radius: Array) -> tuple[Array, Array, Array]:
-        """Depths of the base of the hollow, of the melt sheet and of the breccia lens (the floor), m."""
-        hollow = self.hollow_base(radius)
-        melt = hollow + self.melt_thickness(radius)
-        return hollow, melt, melt + self.breccia_base_thickness(radius)
+    def _peak(self, radius: Array) -> Array:
+        if self.simple:
+            return np.zeros_like(radius)
+        x = (radius - self.peak_radius) / self.peak_width
+        return np.exp(-x * x)

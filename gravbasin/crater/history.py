@@ -8,8 +8,6 @@ from collections.abc import Iterable
 import numpy as np
 from numpy.typing import NDArray
 
-from gravbasin.constants import STANDARD_GRAVITY
-from gravbasin.crater.background import Column
 from gravbasin.errors import InputError
 
 __all__ = ["Burial", "Erosion", "Ground", "after"]
@@ -56,23 +54,9 @@ class Ground:
         """Depth below the ground before impact of a depth below today's ground, m; cover maps above `erosion`."""
         return np.asarray(depth) - self.cover + self.erosion
 
-    def largest_pressure(self, column: Column, depth: Array, at_impact: Array) -> Array:
-        """Largest weight rock has carried since the impact, Pa.
-
-        Parameters
-        ----------
-        column : Column
-            The target.
-        depth : array, m
-            Depth below the ground before impact.
-        at_impact : array, Pa
-            Weight carried just after the impact (the crater still hollow).
-        """
-        largest = at_impact
-        for stripped, cover in self.loads:
-            buried = column.pressure(depth) - column.pressure(stripped) + STANDARD_GRAVITY * self.cover_density * cover
-            largest = np.maximum(largest, buried)
-        return largest
+    def largest_burial(self, depth: Array) -> Array:
+        """Greatest depth below the ground of its day, m, of rock at a depth below the ground before impact."""
+        return np.maximum.reduce([depth, *(depth - stripped + cover for stripped, cover in self.loads)])
 
     @property
     def largest_cover(self) -> float:

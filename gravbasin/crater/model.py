@@ -3,33 +3,46 @@
 from __future__ import annotations
 
 import dataclasses
+import math
 
 import numpy as np
 
-from gravbasin.crater.background import Column
-from gravbasin.crater.damage import FLUID_DENSITY, Damage
-from gravbasin.crater.dimensions import CraterDimensions, crater_dimensions, simple_to_complex_km
+from gravbasin.crater.background import PORE_DEFICIT, PRESETS, Column, saturated_porosity
+from gravbasin.crater.damage import (
+    FLUID_DENSITY,
+    SEALED_BRECCIA,
+    SEALED_FRACTURES,
+    Damage,
+    sealing,
+)
+from gravbasin.crater.dimensions import SUEVITE_DIAMETER, CraterDimensions, crater_dimensions
 from gravbasin.crater.displacement import Displacement
-from gravbasin.crater.fill import LITHOLOGIES, Fill
+from gravbasin.crater.fill import LITHOLOGIES, Fill, lithified_density
+from gravbasin.crater.flexure import Plate, Rebound
 from gravbasin.crater.history import Burial, Erosion, Ground, after
 from gravbasin.errors import InputError
 from gravbasin.scenario import Scenario
 
-__all__ = ["CONTRAST_SCATTER", "CraterModel", "crater_model", "erosion_of"]
+__all__ = ["CONTRAST_SCATTER", "CraterModel", "crater_model", "ground_of"]
 
 KM = 1000.0
 
 CONTRAST_SCATTER = {
+    "sediment contrast": 0.35,
     "breccia contrast": 0.35,
+    "suevite contrast": 0.25,
     "melt contrast": 0.40,
     "fracture porosity": 0.30,
     "porosity decay": 0.20,
     "closure pressure": 0.15,
     "density gradient": 0.20,
-    "peak height": 0.40,
 }
-"""Standard deviation of the natural logarithm of each contrast, from the published ranges (breccia -150..-400,
-melt -50..-200 kg/m³, porosity 0.05-0.12, decay 2-4 km, closure 150-200 MPa, gradient 8-12 kg/m³/km)."""
+"""Standard deviation of the natural logarithm of each contrast, from the published ranges (sediment -200..-900,
+breccia -150..-400, suevite -300..-600, melt -50..-200 kg/m³, porosity 0.05-0.12, decay 2-4 km, closure 150-200 MPa,
+gradient 8-12 kg/m³/km)."""
+
+STEEPEST = 0.8
+"""Decrease of the rise per metre of depth at which a law's uplift is limited; rock turns over at 1."""
 
 
 @dataclasses.dataclass(frozen=True)
@@ -42,6 +55,7 @@ class CraterModel:
     damage: Damage
     fill: Fill
     ground: Ground
+    rebound: Rebound | None = None
 
     @property
     def outer_radius(self) -> float:
@@ -51,14 +65,14 @@ class CraterModel:
     @property
     def base(self) -> float:
         """Depth below the ground before impact under which the model has no contrast, m."""
-        floor = self.displacement.floor
-        base = max(self.displacement.base, floor + self.damage.base)
-        if self.displacement.moho_rise > 0:
-            base = max(base, self.column.moho + 0.5 * self.displacement.moho_rise)
+        base = max(self.displacement.base, self.displacement.floor + self.damage.base)
+        if self.displacement.moho_rise > 0 or self.rebound is not None:
+            # The moat of the Moho is shallower than its rise; the regional bend stays within a kilometre or two.
+            base = max(base, self.column.moho + self.displacement.moho_rise + (2 * KM if self.rebound else 0.0))
         return base
 
 
-def erosion_of(scenario: Scenario) -> Ground:
+def ground_of(scenario: Scenario) -> Ground:
     """Today's ground after the scenario's history."""
     history = scenario.history
     if history.events:
@@ -90,13 +104,15 @@ def crater_model(scenario: Scenario, rng: np.random.Generator | None = None) -> 
     Raises
     ------
     InputError
-        Dimensions that contradict each other (an uplift steeper than rock can rise without turning over).
+        Dimensions that contradict each other (a given uplift steeper than rock can rise without turning over), or a
+        history that strips the whole crust.
     """
     crater = scenario.crater
     dims = crater_dimensions(
         crater.rim_diameter_km,
         target_rock=crater.target_rock,
         transient_law=crater.transient_law,
+        depth_law=crater.depth_law,
         uplift_law=crater.uplift_law,
         melt_coefficient=crater.melt_coefficient,
         given=scenario.dimensions.model_dump(),
@@ -104,67 +120,135 @@ def crater_model(scenario: Scenario, rng: np.random.Generator | None = None) -> 
     )
     factor = _contrast_factors(rng)
     column = _column(scenario, factor["density gradient"])
-    fill = _fill(scenario, dims, factor)
-    displacement = _displacement(dims, column, fill)
-    return CraterModel(dims, column, displacement, _damage(scenario, dims, factor), fill, erosion_of(scenario))
+    ground = ground_of(scenario)
+    if ground.erosion >= column.moho:
+        raise InputError(
+            "history", f"{ground.erosion / KM:g} km stripped", "must leave some crust", "lower the erosion or its rate"
+        )
+    fill = _fill(scenario, dims, column, factor, rng)
+    floor = float(fill.interfaces(np.zeros(1)).floor[0])
+    dims = _limited_uplift(dims, column, floor, drawn=rng is not None)
+    damage = _damage(scenario, dims, factor, rng)
+    displacement = _displacement(dims, column, floor)
+    return CraterModel(dims, column, displacement, damage, fill, ground, _rebound(scenario, column, ground))
 
 
 def _contrast_factors(rng: np.random.Generator | None) -> dict[str, float]:
     if rng is None:
         return dict.fromkeys(CONTRAST_SCATTER, 1.0)
-    return {name: float(np.exp(s * rng.standard_normal())) for name, s in CONTRAST_SCATTER.items()}
+    return {name: math.exp(s * rng.standard_normal()) for name, s in CONTRAST_SCATTER.items()}
 
 
 def _column(scenario: Scenario, gradient_factor: float) -> Column:
     background, crater = scenario.background, scenario.crater
     moho, cover = KM * background.moho_km, KM * crater.cover_thickness_km
-    tops = [KM * layer.top_km for layer in background.layers]
-    slopes = [gradient_factor * layer.gradient_kg_m3_per_km / KM for layer in background.layers]
-    densities = [layer.density_kg_m3 for layer in background.layers]
-    if cover > 0:
-        # The basement keeps its densities by depth; the cover replaces its uppermost part.
-        crust = Column(tuple(tops), tuple(densities), tuple(slopes), moho, background.mantle_density_kg_m3)
-        kept = [(top, rho, slope) for top, rho, slope in zip(tops, densities, slopes, strict=True) if top > cover]
-        slope_at = slopes[int(np.searchsorted(tops, cover, side="right")) - 1]
-        top_of_basement = (cover, float(crust.crust_density(cover)), slope_at)
-        tops, densities, slopes = (
-            list(a) for a in zip((0.0, background.cover_density_kg_m3, 0.0), top_of_basement, *kept, strict=True)
-        )
-    return Column(tuple(tops), tuple(densities), tuple(slopes), moho, background.mantle_density_kg_m3)
+    layers = [
+        (layer.top_km, layer.density_kg_m3, layer.gradient_kg_m3_per_km, layer.porosity) for layer in background.layers
+    ] or [layer for layer in PRESETS[crater.target_rock] if layer[0] < background.moho_km]
+    tops, densities, slopes, pores = (list(a) for a in zip(*layers, strict=True))
+    tops, slopes = [KM * top for top in tops], [gradient_factor * slope / KM for slope in slopes]
+    crust = Column(tuple(tops), tuple(densities), tuple(slopes), moho, background.mantle_density_kg_m3, tuple(pores))
+    return _covered(crust, cover, background.cover_density_kg_m3, background.cover_porosity) if cover > 0 else crust
 
 
-def _fill(scenario: Scenario, dims: CraterDimensions, factor: dict[str, float]) -> Fill:
+def _covered(crust: Column, cover: float, density: float, porosity: float | None) -> Column:
+    """The column with its uppermost part replaced by cover; the basement keeps its densities by depth."""
+    at = int(np.searchsorted(crust.tops, cover, side="right")) - 1
+    below = [i for i, top in enumerate(crust.tops) if top > cover]
+    pores = saturated_porosity(density) if porosity is None else porosity
+    return dataclasses.replace(
+        crust,
+        tops=(0.0, cover, *(crust.tops[i] for i in below)),
+        densities=(density, float(crust.crust_density(cover)), *(crust.densities[i] for i in below)),
+        gradients=(0.0, crust.gradients[at], *(crust.gradients[i] for i in below)),
+        porosities=(pores, crust.porosities[at], *(crust.porosities[i] for i in below)),
+    )
+
+
+def _fill(
+    scenario: Scenario,
+    dims: CraterDimensions,
+    column: Column,
+    factor: dict[str, float],
+    rng: np.random.Generator | None,
+) -> Fill:
     given, crater = scenario.fill, scenario.crater
-    sealed = given.breccia_retention or (0.1 if crater.setting == "marine" else 1.0)
-    diameter = KM * dims.rim_diameter_km
-    ring = dims.ring_weight
-    # A central peak is 0.22 D wide at its foot (Pike 1985, from memory); a peak ring has flanks of 0.05 D.
+    left = sealing(crater.setting, crater.age_myr, sealed=SEALED_BRECCIA).draw(rng)
+    left = left if given.breccia_retention is None else given.breccia_retention
+    diameter, ring = KM * dims.rim_diameter_km, dims.ring_weight
+    # A central peak is 0.22 D wide at its foot (Pike 1985, from memory), where it has fallen to 5 % of its height; a
+    # peak ring has flanks of 0.05 D.
+    width = diameter * (0.11 / math.sqrt(math.log(20.0)) * (1 - ring) + 0.05 * ring)
     return Fill(
         rim_radius=0.5 * diameter,
-        simple=dims.rim_diameter_km < simple_to_complex_km(crater.target_rock),
+        simple=dims.simple,
         apparent_depth=KM * dims.apparent_depth_km,
         peak_height=KM * dims.peak_height_km,
         peak_radius=0.5 * KM * dims.peak_ring_diameter_km * ring,
-        peak_width=diameter * (0.11 * (1 - ring) + 0.05 * ring),
+        peak_width=width,
         melt_volume=KM**3 * dims.melt_volume_km3,
         melt_radius=0.5 * KM * dims.melt_diameter_km,
         breccia_thickness=KM * dims.breccia_thickness_km,
-        breccia_contrast=given.breccia_contrast_kg_m3 * sealed * factor["breccia contrast"],
+        suevite_thickness=KM * dims.suevite_thickness_km,
+        suevite_radius=0.5 * SUEVITE_DIAMETER * diameter,
+        breccia_contrast=given.breccia_contrast_kg_m3 * left * factor["breccia contrast"],
+        suevite_contrast=given.suevite_contrast_kg_m3 * left * factor["suevite contrast"],
         melt_contrast=given.melt_contrast_kg_m3 * factor["melt contrast"],
+        breccia_crossover=_crossover(given.breccia_contrast_kg_m3),
+        suevite_crossover=_crossover(given.suevite_contrast_kg_m3),
+        melt_layering=given.melt_layering_kg_m3,
         hollow=given.hollow,
-        sediment_density=given.sediment_density_kg_m3,
+        sediment_density=_sediment_density(scenario, column, factor["sediment contrast"]),
         compaction=LITHOLOGIES[given.lithology] if given.lithology else None,
     )
 
 
-def _displacement(dims: CraterDimensions, column: Column, fill: Fill) -> Displacement:
-    diameter = KM * dims.rim_diameter_km
-    floor = float(fill.interfaces(np.zeros(1))[2][0])
-    # Rock rises over the depth of the transient cavity, at least 8 km, and never below the Moho by itself.
-    base = min(max(KM * dims.transient_depth_km, 8 * KM, floor + 1.2 * KM * dims.structural_uplift_km), column.moho)
-    field = Displacement(
-        rise=KM * dims.structural_uplift_km,
-        core_radius=0.5 * KM * dims.central_uplift_diameter_km,
+def _crossover(contrast: float) -> float:
+    """Porosity that a contrast stands for; rock that is not lighter than its target has no such porosity."""
+    return -contrast / PORE_DEFICIT if contrast < 0 else math.inf
+
+
+def _sediment_density(scenario: Scenario, column: Column, factor: float) -> float:
+    """Given, else by age; the scatter stretches its contrast to the ground, within mud (1600) and solid rock (2750)."""
+    if scenario.fill.sediment_density_kg_m3 is not None:
+        return scenario.fill.sediment_density_kg_m3
+    marine = scenario.crater.setting == "marine"
+    top = column.top_density
+    # Sea-floor sediment filled a marine crater at once and compacted with the target (contrast -150, computed).
+    expected = max(lithified_density(scenario.crater.age_myr), top - 150.0 if marine else 0.0)
+    return min(max(top - factor * (top - expected), 1600.0), max(2750.0, expected))
+
+
+def _limited_uplift(dims: CraterDimensions, column: Column, floor: float, *, drawn: bool) -> CraterDimensions:
+    """Uplift that rock can do: it fades between the floor and the Moho without turning over."""
+    available = max(column.moho - floor, 0.0) / KM
+    given = dims.origin["structural_uplift_km"] == "given"
+    most = STEEPEST * available
+    if dims.structural_uplift_km <= most or (given and dims.structural_uplift_km < available):
+        return dims
+    if given and not drawn:
+        raise InputError(
+            "dimensions.structural_uplift_km",
+            dims.structural_uplift_km,
+            f"must be less than {available:.3g} km, or rock would turn over above the Moho",
+            "lower it, or deepen background.moho_km",
+        )
+    note = f"limited from {dims.structural_uplift_km:.3g}: more would turn rock over above the Moho"
+    return dataclasses.replace(
+        dims, structural_uplift_km=most, validity={**dims.validity, "structural_uplift_km": note}
+    )
+
+
+def _displacement(dims: CraterDimensions, column: Column, floor: float) -> Displacement:
+    diameter, rise = KM * dims.rim_diameter_km, KM * dims.structural_uplift_km
+    # Rock rises over the depth of the transient cavity, deeper only so as not to turn over, and not below the Moho; a
+    # rim needs a tenth of the diameter to die out.
+    base = min(max(KM * dims.transient_depth_km, floor + rise / STEEPEST, floor + 0.1 * diameter), column.moho)
+    # The mapped base of an uplift is where it has all but ended: a tenth of the rise.
+    core = 0.5 * KM * dims.central_uplift_diameter_km / math.sqrt(math.log(10.0))
+    return Displacement(
+        rise=rise,
+        core_radius=core,
         floor=floor,
         base=base,
         ring_radius=max(0.5 * KM * dims.peak_ring_diameter_km, 0.1 * diameter),
@@ -178,24 +262,24 @@ def _displacement(dims: CraterDimensions, column: Column, fill: Fill) -> Displac
         syncline_width=0.09 * diameter,
         moho=column.moho,
         moho_rise=KM * dims.moho_uplift_km,
+        # 1.5-2 km at the centre, a moat at 30-55 km of a structure of about 200 km (Christeson et al. 2009).
+        moho_radius=0.10 * diameter,
+        moat_radius=0.21 * diameter,
+        moat_width=0.07 * diameter,
     )
-    if field.steepest() >= 1.0:
-        raise InputError(
-            "structural uplift",
-            f"{dims.structural_uplift_km:.1f} km",
-            f"rises faster than rock can without turning over (it fades within {base / KM:.1f} km)",
-            "give a smaller dimensions.structural_uplift_km or the stratigraphic uplift law",
-        )
-    return field
 
 
-def _damage(scenario: Scenario, dims: CraterDimensions, factor: dict[str, float]) -> Damage:
+def _damage(
+    scenario: Scenario, dims: CraterDimensions, factor: dict[str, float], rng: np.random.Generator | None
+) -> Damage:
     given, crater = scenario.damage, scenario.crater
+    left = sealing(crater.setting, crater.age_myr, sealed=SEALED_FRACTURES).draw(rng)
     diameter_km = dims.rim_diameter_km
     suppression = given.core_suppression
     if suppression is None:
-        suppression = 0.7 * float(np.clip((diameter_km - 25.0) / 20.0, 0.0, 1.0))
+        suppression = 0.7 * min(max((diameter_km - 25.0) / 20.0, 0.0), 1.0)
     decay_km = given.decay_km or min(0.12 * diameter_km, 3.0)
+    fluid = given.pore_fluid or ("sea water" if crater.setting == "marine" else "fresh water")
     return Damage(
         form=given.form,
         porosity=min(given.porosity * factor["fracture porosity"], 0.4),
@@ -203,9 +287,19 @@ def _damage(scenario: Scenario, dims: CraterDimensions, factor: dict[str, float]
         base=KM * dims.fracture_base_km,
         closure_pressure=1e6 * given.closure_pressure_mpa * factor["closure pressure"],
         exponent=given.pressure_exponent,
-        retention=given.retention or (0.25 if crater.setting == "marine" else 1.0),
+        retention=left if given.retention is None else given.retention,
         taper_radius=0.42 * KM * diameter_km,
         core_suppression=suppression,
         core_radius=0.5 * KM * dims.central_uplift_diameter_km,
-        fluid_density=FLUID_DENSITY[given.pore_fluid],
+        fluid_density=FLUID_DENSITY[fluid],
+        crossover=given.crossover_porosity,
     )
+
+
+def _rebound(scenario: Scenario, column: Column, ground: Ground) -> Rebound | None:
+    history = scenario.history
+    if history.rebound_elastic_thickness_km is None:
+        return None
+    plate = Plate(KM * history.rebound_elastic_thickness_km, mantle_density=column.mantle_density)
+    density = float(column.crust_mass(ground.erosion)) / max(ground.erosion, 1.0)
+    return Rebound(plate, KM * history.eroded_radius_km, ground.erosion, density)

@@ -2,105 +2,36 @@
 
 from __future__ import annotations
 
-import dataclasses
-from functools import cached_property
-
 import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
 
 from gravbasin import labels
-from gravbasin.crater.damage import FLUID_DENSITY
+from gravbasin.crater.background import PORE_DEFICIT
+from gravbasin.crater.cells import PARTS, Cells, Mesh, assemble, contrast_parts, default_mesh
 from gravbasin.crater.model import CraterModel, crater_model
 from gravbasin.scenario import Scenario
 from gravbasin.scenario_file import scenario_hash
 
-__all__ = ["PARTS", "UNITS", "Mesh", "contrast_parts", "default_mesh", "density_section", "section_parts"]
+__all__ = ["UNITS", "density_section", "section_parts"]
 
 Array = NDArray[np.float64]
 
-PARTS = ("sediment in the hollow", "melt", "breccia", "fractures", "crustal uplift", "Moho uplift")
-"""Causes of contrast; they add up to the whole."""
-
-UNITS = ("intact target", "cover", "sediment", "melt rock", "breccia", "fractured rock", "mantle", "water or air")
+UNITS = (
+    "intact target",
+    "cover",
+    "sediment",
+    "melt rock",
+    "breccia",
+    "fractured rock",
+    "mantle",
+    "water or air",
+    "suevite",
+)
 """Names of the unit codes, by code."""
 
 FRACTURED_FROM = 0.005
 """Porosity above which rock below the floor is called fractured: the intact shield baseline (from memory)."""
-
-
-@dataclasses.dataclass(frozen=True)
-class Mesh:
-    """Edges of the section's cells, m: depth below today's ground, distance from the centre."""
-
-    depth_edges: Array
-    radius_edges: Array
-
-    @cached_property
-    def radius(self) -> Array:
-        """Middle of every ring, m."""
-        return 0.5 * (self.radius_edges[1:] + self.radius_edges[:-1])
-
-    @cached_property
-    def depth(self) -> Array:
-        """Middle of every layer, m."""
-        return 0.5 * (self.depth_edges[1:] + self.depth_edges[:-1])
-
-
-def default_mesh(model: CraterModel, *, layers: int = 80, rings: int = 160) -> Mesh:
-    """Even rings to where the model ends; layers that grow with depth, thinnest at the ground.
-
-    Parameters
-    ----------
-    model : CraterModel
-        Sets how deep and how wide the mesh must be.
-    layers, rings : int
-        Number of cells in depth and in radius.
-    """
-    ground = model.ground
-    base = max(model.base - ground.erosion, 1000.0)
-    growth = 3.0  # the deepest layer is exp(3) = 20 times the thinnest
-    below = base * np.expm1(growth * np.arange(layers + 1) / layers) / np.expm1(growth)
-    return Mesh(_with_cover(below, ground.cover), np.linspace(0.0, model.outer_radius, rings + 1))
-
-
-def _with_cover(edges: Array, cover: float) -> Array:
-    """Edges below the cover's base, with a few layers of cover put on top and as many edges as before."""
-    if cover == 0:
-        return edges
-    count = max(2, edges.size // 20)
-    kept = np.concatenate(
-        [edges[:1], np.interp(np.linspace(0, 1, edges.size - count)[1:], np.linspace(0, 1, edges.size), edges)]
-    )
-    return np.concatenate([np.linspace(0.0, cover, count + 1)[:-1], cover + kept])
-
-
-@dataclasses.dataclass(frozen=True)
-class _Cells:
-    """Contrast by part, with what else a reader wants to know of every cell."""
-
-    parts: Array
-    porosity: Array
-    unit: Array
-    background: Array
-
-
-def contrast_parts(model: CraterModel, mesh: Mesh) -> Array:
-    """Density contrast of every cell by cause.
-
-    Parameters
-    ----------
-    model : CraterModel
-        The structure.
-    mesh : Mesh
-        Any mesh; thin units are averaged over the cells they cross, so their mass does not depend on it.
-
-    Returns
-    -------
-    (part, depth, radius) array, kg/m³
-        In the order of `PARTS`.
-    """
-    return _assemble(model, mesh).parts
 
 
 def density_section(scenario: Scenario | CraterModel, *, mesh: Mesh | None = None) -> xr.Dataset:
@@ -127,11 +58,12 @@ def density_section(scenario: Scenario | CraterModel, *, mesh: Mesh | None = Non
     160
     """
     model, mesh, facts = _prepare(scenario, mesh)
-    cells = _assemble(model, mesh)
-    contrast = cells.parts.sum(axis=0)
+    cells = assemble(model, mesh)
+    contrast = np.asarray(sum(cells.parts))
     coords = {"depth": mesh.depth, "radius": mesh.radius}
     dims = ("depth", "radius")
-    unit = labels.data_array(cells.unit, dims, coords, name="unit", units="1", long_name="dominant unit of the cell")
+    codes = _dominant(model, cells)
+    unit = labels.data_array(codes, dims, coords, name="unit", units="1", long_name="dominant unit of the cell")
     unit.attrs |= {
         "flag_values": np.arange(len(UNITS), dtype=np.int8),
         "flag_meanings": " ".join(name.replace(" ", "_") for name in UNITS),
@@ -139,7 +71,7 @@ def density_section(scenario: Scenario | CraterModel, *, mesh: Mesh | None = Non
     section = xr.Dataset(
         {
             "density": labels.data_array(
-                cells.background + contrast, dims, coords, name="density", units="kg m-3", long_name="bulk density"
+                _density(model, cells, contrast), dims, coords, name="density", units="kg m-3", long_name="bulk density"
             ),
             "density_contrast": labels.data_array(
                 contrast,
@@ -150,12 +82,12 @@ def density_section(scenario: Scenario | CraterModel, *, mesh: Mesh | None = Non
                 long_name="density minus that of the intact column at the same depth",
             ),
             "porosity": labels.data_array(
-                cells.porosity,
+                _porosity(model, cells),
                 dims,
                 coords,
                 name="porosity",
                 units="1",
-                long_name="porosity of fractures and breccia, sediment aside",
+                long_name="porosity of rock, breccia and suevite, sediment aside",
             ),
             "unit": unit,
         },
@@ -197,82 +129,24 @@ def _with_edges(section: xr.Dataset, mesh: Mesh) -> xr.Dataset:
     )
 
 
-def _assemble(model: CraterModel, mesh: Mesh) -> _Cells:
-    ground, column = model.ground, model.column
-    edges = np.maximum(ground.original_depth(mesh.depth_edges), ground.erosion)
-    top, bottom = edges[:-1, None], edges[1:, None]
-    height = np.diff(mesh.depth_edges)[:, None]
-    hollow, melt, floor = (z[None, :] for z in model.fill.interfaces(mesh.radius))
-
-    def share(upper: Array, lower: Array) -> Array:
-        """Share of each cell between two interfaces."""
-        return np.maximum(np.minimum(bottom, lower) - np.maximum(top, upper), 0.0) / height
-
-    middle = 0.5 * (edges[1:] + edges[:-1])
-    intact = column.density(middle)[:, None]
-    sediment = share(np.full_like(hollow, -np.inf), hollow)
-    melt_share, breccia, rock = share(hollow, melt), share(melt, floor), share(floor, np.full_like(floor, np.inf))
-    crust_rise, moho_rise = _uplift_contrast(model, mesh, edges, floor)
-    solid = intact + crust_rise
-    below_floor = 0.5 * (np.maximum(top, floor) + np.maximum(bottom, floor)) - floor
-    at_impact = np.maximum(column.pressure(middle)[:, None] - column.pressure(hollow), 0.0)
-    pressure = ground.largest_pressure(column, middle[:, None], at_impact)
-    fractures = model.damage.open_porosity(below_floor, mesh.radius[None, :], pressure)
-    fill_density = _hollow_density(model, middle)[:, None]
-    parts = np.stack(
-        [
-            sediment * (fill_density - intact),
-            melt_share * model.fill.melt_contrast,
-            breccia * model.fill.breccia_contrast,
-            -rock * fractures * (solid - model.damage.fluid_density),
-            rock * crust_rise,
-            rock * moho_rise,
-        ]
-    )
-    breccia_porosity = np.maximum(-model.fill.breccia_contrast, 0.0) / (intact - model.damage.fluid_density)
-    cover = 1.0 - np.diff(edges)[:, None] / height
-    background = cover * ground.cover_density + (1.0 - cover) * intact
-    shares = [cover + np.zeros_like(rock), sediment, melt_share, breccia, rock]
-    unit = _dominant(shares, fractures, middle[:, None] > column.moho, model.fill.hollow)
-    return _Cells(parts, rock * fractures + breccia * breccia_porosity, unit, background + np.zeros_like(rock))
+def _density(model: CraterModel, cells: Cells, contrast: Array) -> Array:
+    """Bulk density: that of the cover, of the intact column, and the contrast on top."""
+    cover = cells.shares[0]
+    return cover * model.ground.cover_density + (1.0 - cover) * model.column.density(cells.middle)[:, None] + contrast
 
 
-def _uplift_contrast(model: CraterModel, mesh: Mesh, edges: Array, floor: Array) -> tuple[Array, Array]:
-    """Mean contrast of the risen rock in every cell, crust and Moho apart: that of the interval it came from."""
-    column = model.column
-    rise = model.displacement.net_rise(edges, mesh.radius)
-    upper, lower = np.maximum(edges[:-1, None], floor), np.maximum(edges[1:, None], floor)
-    # Within the cell that the floor cuts, the rise is taken as linear.
-    span = np.maximum(np.diff(edges)[:, None], 1e-9)
-    slope = np.diff(rise, axis=0) / span
-    source_top = upper + rise[:-1] + slope * (upper - edges[:-1, None])
-    source_bottom = lower + rise[1:]
-    here, source = lower - upper, np.maximum(source_bottom - source_top, 1e-9)
-    crust = (column.crust_mass(source_bottom) - column.crust_mass(source_top)) / source
-    intact = (column.crust_mass(lower) - column.crust_mass(upper)) / np.maximum(here, 1e-9)
-    mantle_now = np.maximum(source_bottom - np.maximum(source_top, column.moho), 0.0) / source
-    mantle_before = np.maximum(lower - np.maximum(upper, column.moho), 0.0) / np.maximum(here, 1e-9)
-    exists = here > 1e-6
-    return np.where(exists, crust - intact, 0.0), np.where(
-        exists, column.moho_contrast * (mantle_now - mantle_before), 0.0
-    )
+def _porosity(model: CraterModel, cells: Cells) -> Array:
+    """Porosity of target rock, breccia and suevite; that of sediment is not told apart."""
+    _, _, suevite, _, breccia, rock = cells.shares
+    fill, before = model.fill, model.column.porosity(cells.middle)[:, None]
+    broken = -(breccia * fill.breccia_contrast + suevite * fill.suevite_contrast) / PORE_DEFICIT
+    return np.maximum(rock * (before + cells.porosity_change) + broken, 0.0)
 
 
-def _hollow_density(model: CraterModel, depth: Array) -> Array:
-    """Density of what lies in the hollow at a depth below the ground before impact, kg/m³."""
-    fill, ground = model.fill, model.ground
-    if fill.hollow == "air":
-        return model.column.density(depth)
-    if fill.hollow == "water":
-        return np.full_like(depth, FLUID_DENSITY["fresh water"])
-    if fill.compaction is None:
-        return np.full_like(depth, fill.sediment_density)
-    burial = np.maximum.reduce([depth, *(depth - stripped + cover for stripped, cover in ground.loads)])
-    return fill.compaction.density(burial)
-
-
-def _dominant(shares: list[Array], fractures: Array, mantle: Array, hollow: str) -> NDArray[np.int8]:
-    largest = np.argmax(np.stack(shares), axis=0)
-    rock = np.where(fractures >= FRACTURED_FROM, 5, np.where(mantle, 6, 0))
-    filled = 2 if hollow == "sediment" else 7
-    return np.select([largest == i for i in range(4)], [1, filled, 3, 4], default=rock).astype(np.int8)
+def _dominant(model: CraterModel, cells: Cells) -> NDArray[np.int8]:
+    largest = np.argmax(np.stack(cells.shares), axis=0)
+    mantle = cells.middle[:, None] > model.column.moho
+    rock = np.where(cells.porosity_change >= FRACTURED_FROM, 5, np.where(mantle, 6, 0))
+    filled = 2 if model.fill.hollow == "sediment" or model.ground.loads else 7
+    codes = (1, filled, 8, 3, 4)  # cover, hollow, suevite, melt, breccia
+    return np.select([largest == i for i in range(5)], codes, default=rock).astype(np.int8)
