@@ -13,7 +13,7 @@ __all__ = ["sphere_kernel"]
 
 Array = NDArray[np.float64]
 
-_NODES = 4  # of the depth quadrature along a conical side
+_NODES = 3  # of the depth quadrature along a conical side
 _NEAR_NODES = 16  # the same where the station's level is within about a layer's thickness
 
 
