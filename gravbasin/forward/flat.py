@@ -50,7 +50,7 @@ def disc_potential(radius: ArrayLike, disc_radius: ArrayLike, depth: ArrayLike) 
     r, a, h = (np.asarray(x, dtype=float) for x in (radius, disc_radius, depth))
     r, a, h = np.broadcast_arrays(r, a, np.abs(h))
     far = r**2 + h**2 > (_FAR * a) ** 2
-    out = _rim_integral(r, a, h)
+    out = np.asarray(_rim_integral(r, a, h))
     if far.any():
         out[far] = _multipoles(r[far], a[far], h[far])
     return out

@@ -188,10 +188,9 @@ def _half_widths() -> Iterator[Check]:
 def _grids() -> Iterator[Check]:
     """Long prisms: a horizontal cylinder, and a cosine interface under a wide Gaussian window."""
     east, north = np.arange(-40, 41) * 25.0, np.arange(-100, 101) * 2e3
-    depth_edges = np.linspace(500.0, 1500.0, 41)
-    middle = 0.5 * (depth_edges[1:] + depth_edges[:-1])
+    depth_edges = 500.0 + 25.0 * np.arange(41.0)
     west: Array = east[None, :] - 12.5
-    top = np.asarray(middle[:, None] - 1012.5, dtype=np.float64)
+    top: Array = depth_edges[:-1, None] - 1000.0
     share = disc_cell_area(west, west + 25.0, top, top + 25.0, np.asarray(500.0)) / 625.0
     pipe = prisms_of(500.0 * share[:, None, :] * np.ones((1, north.size, 1)), depth_edges, north, east)
     row = grid_anomaly(pipe, height_m=0.0)[north.size // 2]
