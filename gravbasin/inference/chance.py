@@ -102,7 +102,7 @@ class Stencil:
         covariance = ring_covariance(weights, noise, shape=shape, spacing_m=spacing)
         east, north = np.meshgrid(easting, northing)
         basis = polynomial_basis(east, north, noise.regional_order, centre=(0.0, 0.0), scale=float(edges[-1]))
-        response = ring_response(weights, np.hypot(east, north), radius, spacing=spacing, resolution=resolution)
+        response = ring_response(weights, easting, northing, radius, resolution=resolution)
         templates = response @ profiles
         likelihood = ring_likelihood(covariance + shape_scatter(templates, area), weights @ basis)
         return cls(weights, shape, covariance, response, templates, likelihood)

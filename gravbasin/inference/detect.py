@@ -115,12 +115,13 @@ def signal_band(
     The profile is split by its Hankel transform, t(r) = (1/2π) ∫ T(k) J0(kr) k dk, and each part sent through the
     filter.
     """
-    k = np.linspace(0.0, 2 * np.pi / shortest, 601)[1:]
+    edges = np.linspace(0.0, 2 * np.pi / shortest, 601)
+    k = 0.5 * (edges[1:] + edges[:-1])
     bessel = special.j0(np.outer(k, radius))
     transform = 2 * np.pi * np.trapezoid(bessel * profile * radius, radius, axis=1)
     density = transform * k * (bessel @ response_to_profile)
-    total = np.maximum.accumulate(np.cumsum(density))
+    total = np.concatenate([[0.0], np.maximum.accumulate(np.cumsum(density))])
     if not total[-1] > 0.0:
         return (float("nan"), float("nan"))
-    edges = np.interp([0.5 - share / 2, 0.5 + share / 2], total / total[-1], k)
-    return float(2e-3 * np.pi / edges[1]), float(2e-3 * np.pi / edges[0])
+    low, high = np.interp([0.5 - share / 2, 0.5 + share / 2], total / total[-1], edges)
+    return float(2e-3 * np.pi / high), float(2e-3 * np.pi / low)

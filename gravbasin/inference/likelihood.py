@@ -112,7 +112,6 @@ def ring_likelihood(covariance: Array, regional: Array) -> RingLikelihood:
         raise CannotFinish(
             "the covariance of the ring means is singular: give the noise a nugget or widen the rings"
         ) from None
-    regional = regional / np.maximum(np.linalg.norm(regional, axis=0), 1e-300)
     white = linalg.solve_triangular(factor, regional, lower=True)
     left, size, _ = np.linalg.svd(white, full_matrices=False)
     return RingLikelihood(factor, left[:, size > 1e-6 * size[0]], regional)

@@ -33,24 +33,22 @@ def low_pass(grid: Array, spacing: tuple[float, float], resolution: float) -> Ar
 
 def ring_response(
     weights: sparse.csr_array,
-    distance: Array,
+    easting: Array,
+    northing: Array,
     radius: Array,
     *,
-    spacing: tuple[float, float],
     resolution: float | None = None,
 ) -> Array:
     """Matrix that turns a radial profile into the ring means a map would give.
 
     Parameters
     ----------
-    weights : (n_ring, n_cell) sparse array
+    weights : (n_ring, n_northing * n_easting) sparse array
         Ring-mean weights on the map's lattice (C order).
-    distance : (n_northing, n_easting) array, m
-        Distance of every node from the centre.
+    easting, northing : (n_easting,), (n_northing,) arrays, m
+        Axes of that lattice relative to the centre.
     radius : (n_radius,) array, m
         Ascending radii of the profile, from 0; the profile is interpolated linearly and zero beyond the last.
-    spacing : (northing, easting), m
-        Grid steps.
     resolution : float, optional
         Half the shortest wavelength the map holds, m; the profile passes through the same low-pass as the map did.
 
@@ -59,21 +57,22 @@ def ring_response(
     (n_ring, n_radius) array
         Ring means = matrix @ profile.
     """
-    lookup = _interpolation(distance.ravel(), radius)
+    spacing = (float(northing[1] - northing[0]), float(easting[1] - easting[0]))
     if resolution is None or resolution <= max(spacing):
-        return np.asarray((weights @ lookup).toarray())
+        return np.asarray((weights @ _interpolation(np.hypot(easting, northing[:, None]), radius)).toarray())
     # The low-pass is symmetric, so it may act on the few ring weights instead of on every radius.
-    shape = distance.shape
-    pad = [int(np.ceil(6.0 * resolution / step)) for step in spacing]
-    rings = np.zeros((weights.shape[0], shape[0] + 2 * pad[0], shape[1] + 2 * pad[1]))
-    inside = (slice(None), slice(pad[0], -pad[0]), slice(pad[1], -pad[1]))
-    rings[inside] = weights.toarray().reshape(-1, *shape)
-    smooth = low_pass(rings, spacing, resolution)[inside].reshape(weights.shape[0], -1)
-    return np.asarray(smooth @ lookup)
+    pad_n, pad_e = (int(np.ceil(6.0 * resolution / step)) for step in spacing)
+    rings = weights.toarray().reshape(-1, northing.size, easting.size)
+    smooth = low_pass(np.pad(rings, ((0, 0), (pad_n, pad_n), (pad_e, pad_e))), spacing, resolution)
+    wide_n = northing[0] + spacing[0] * np.arange(-pad_n, northing.size + pad_n)
+    wide_e = easting[0] + spacing[1] * np.arange(-pad_e, easting.size + pad_e)
+    lookup = _interpolation(np.hypot(wide_e, wide_n[:, None]), radius)
+    return np.asarray(smooth.reshape(weights.shape[0], -1) @ lookup)
 
 
 def _interpolation(distance: Array, radius: Array) -> sparse.csr_array:
     """Linear interpolation from `radius` to `distance` as a sparse matrix; zero beyond the last radius."""
+    distance = distance.ravel()
     index = np.clip(np.searchsorted(radius, distance, side="right") - 1, 0, radius.size - 2)
     fraction = (distance - radius[index]) / (radius[index + 1] - radius[index])
     inside = distance <= radius[-1]

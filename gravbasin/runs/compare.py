@@ -116,8 +116,8 @@ def compare_with_map(scenario: Scenario, modelled: Modelled, observed: xr.DataAr
     centre, stated = _centre(scenario), scenario.observed.resolution_km
     resolution = KM * stated if stated else None
     rings = _covered(observed, centre, _ring_edges(scenario, observed))
-    distance = np.hypot(observed.easting.values - centre[0], observed.northing.values[:, None] - centre[1])
-    response = ring_response(rings.weights, distance, modelled.radius, spacing=rings.spacing_m, resolution=resolution)
+    easting, northing = observed.easting.values - centre[0], observed.northing.values - centre[1]
+    response = ring_response(rings.weights, easting, northing, modelled.radius, resolution=resolution)
     templates = response @ modelled.profiles
     covariances = [rings.covariance(n) for n in _plausible(scenario, noise)]
     regional_columns = rings.weights @ _regional_basis(observed, centre, noise)
@@ -140,7 +140,7 @@ def compare_with_map(scenario: Scenario, modelled: Modelled, observed: xr.DataAr
         amplitude=amplitude,
         amplitude_error=amplitude_error,
         chance=_chance(scenario, modelled, observed, noise, rings, resolution, likelihood, template),
-        maps=_maps(observed, noise, modelled, distance, exclude),
+        maps=_maps(observed, noise, modelled, np.hypot(easting, northing[:, None]), exclude),
     )
 
 
