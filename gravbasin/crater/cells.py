@@ -89,7 +89,7 @@ def _with_cover(edges: Array, cover: float) -> Array:
 
 def contrast(model: CraterModel, mesh: Mesh) -> Array:
     """Density contrast of every cell, (depth, radius) kg/m³: the fast path for banks of models on one mesh."""
-    return np.asarray(sum(assemble(model, mesh).parts))
+    return assemble(model, mesh).contrast
 
 
 def contrast_parts(model: CraterModel, mesh: Mesh) -> Array:
@@ -107,28 +107,33 @@ def contrast_parts(model: CraterModel, mesh: Mesh) -> Array:
     (part, depth, radius) array, kg/m³
         In the order of `PARTS`.
     """
-    shape = (mesh.depth.size, mesh.radius.size)
-    return np.stack([np.broadcast_to(part, shape) for part in assemble(model, mesh).parts])
+    cells = assemble(model, mesh)
+    return np.stack([cells.whole(part) for part in cells.parts])
 
 
 @dataclasses.dataclass(frozen=True)
 class Cells:
     """Contrast by part, with what else a reader wants to know of every cell.
 
+    Most parts reach a few layers only, so arrays hold the layers from the top down to where a part ends.
+
     Attributes
     ----------
-    parts : tuple of (depth, radius) arrays, kg/m³
-        In the order of `PARTS`; a part that is nothing anywhere may be a scalar zero.
-    shares : tuple of (depth, radius) arrays
-        Share of each cell in cover, hollow, suevite, melt, breccia and rock.
+    parts : tuple of (layers it reaches, radius) arrays, kg/m³
+        In the order of `PARTS`.
+    shares : tuple of (layers it reaches, radius) arrays
+        Share of each cell in hollow, suevite, melt and breccia.
+    rock : (depth, radius) array
+        Share of each cell in rock below the floor; what is left over is cover.
     porosity_change : (depth, radius) array
-        Fracture porosity of the rock below the floor.
+        Fracture porosity of that rock.
     edges : (depth + 1,) array, m
         Depth of the cells' edges below the ground before impact, held at the stripped surface within the cover.
     """
 
     parts: tuple[Array, ...]
     shares: tuple[Array, ...]
+    rock: Array
     porosity_change: Array
     edges: Array
 
@@ -137,28 +142,48 @@ class Cells:
         """Middle of each layer's target part, depth below the ground before impact, m."""
         return 0.5 * (self.edges[1:] + self.edges[:-1])
 
+    @property
+    def contrast(self) -> Array:
+        """Sum of the parts, (depth, radius) kg/m³."""
+        total = np.zeros_like(self.rock)
+        for part in self.parts:
+            total[: len(part)] += part
+        return total
+
+    def whole(self, part: Array) -> Array:
+        """An array that ends at some layer, with zeros below it."""
+        full = np.zeros_like(self.rock)
+        full[: len(part)] = part
+        return full
+
 
 def assemble(model: CraterModel, mesh: Mesh) -> Cells:
     """All parts of the contrast on a mesh."""
-    ground, column = model.ground, model.column
+    ground, column, radius = model.ground, model.column, mesh.radius
     edges = np.maximum(ground.original_depth(mesh.depth_edges), ground.erosion)
     height = np.diff(mesh.depth_edges)[:, None]
-    radius, bend = mesh.radius, _bend(model, mesh.radius)
+    bend = _bend(model, radius)
     bases = Interfaces(*(base - bend for base in model.fill.interfaces(radius)))
-    shares = _shares(edges, height, bases)
+    cut = int(np.searchsorted(edges[:-1], bases.floor.max()))  # layers from here down are rock throughout
+    *shares, rock_above = _shares(edges[: cut + 1], height[:cut], bases)
+    rock = np.empty((edges.size - 1, radius.size))
+    rock[:] = np.diff(edges)[:, None] / height
+    rock[:cut] = rock_above
     rise = model.displacement.net_rise(edges, radius) + bend
-    crust_rise, moho_rise = _uplift(model, edges, bases.floor, rise)
+    crust_rise, moho_rise = _uplift(model, edges, bases.floor, rise, cut)
     middle = 0.5 * (edges[1:] + edges[:-1])
     weight = np.maximum(column.crust_mass(middle)[:, None] + largest_overburden(column, model.fill, ground, bases), 0.0)
-    below_floor = _below_floor(edges, middle, bases.floor)
+    below_floor = middle[:, None] - bases.floor
+    below_floor[:cut] = 0.5 * (np.maximum(edges[:cut, None], bases.floor) + edges[1 : cut + 1, None]) - bases.floor
     change = model.damage.open_porosity(below_floor, radius, STANDARD_GRAVITY * weight)
     if any(column.porosities):
         change *= bulking(column.porosity(middle[:, None] + 0.5 * (rise[1:] + rise[:-1])), model.damage.crossover)
-    solid = column.crust_density(middle)[:, None] + crust_rise
-    rock = shares[-1]
-    fractures = -rock * change * (solid - model.damage.fluid_density)
-    fills = _fill_parts(model, edges, height, bases, shares)
-    return Cells((*fills, fractures, rock * crust_rise, rock * moho_rise), shares, change, edges)
+    solid = crust_rise + column.crust_density(middle)[:, None]
+    fractures = change * (model.damage.fluid_density - solid) * rock
+    fills = _fill_parts(model, edges[: cut + 1], height[:cut], bases, shares)
+    return Cells(
+        (*fills, fractures, rock * crust_rise, rock[: len(moho_rise)] * moho_rise), tuple(shares), rock, change, edges
+    )
 
 
 def _bend(model: CraterModel, radius: Array) -> Array:
@@ -169,56 +194,46 @@ def _bend(model: CraterModel, radius: Array) -> Array:
 
 
 def _shares(edges: Array, height: Array, bases: Interfaces) -> tuple[Array, ...]:
-    """Share of every cell in cover, hollow, suevite, melt, breccia and rock."""
+    """Share of every cell in hollow, suevite, melt, breccia and rock."""
     top, bottom = edges[:-1, None], edges[1:, None]
-    depth_in = [np.clip(base, top, bottom) - top for base in bases]  # how far into the cell each base lies
-    units = [depth_in[0] / height]
-    units += [(lower - upper) / height for upper, lower in pairwise(depth_in)]
-    rock = (bottom - top - depth_in[-1]) / height
-    cover = np.broadcast_to(1.0 - (bottom - top) / height, rock.shape)
-    return (cover, *units, rock)
-
-
-def _below_floor(edges: Array, middle: Array, floor: Array) -> Array:
-    """Depth below the floor of the middle of each cell's rock, m; negative where a cell has none."""
-    below = middle[:, None] - floor
-    cut = (edges[:-1, None] < floor) & (edges[1:, None] > floor)
-    return np.where(cut, 0.5 * (edges[1:, None] - floor), below)
+    within = [np.minimum(np.maximum(base, top), bottom) for base in bases]  # where each base cuts the cell
+    return tuple((lower - upper) / height for upper, lower in pairwise([top, *within, bottom]))
 
 
 def _fill_parts(
-    model: CraterModel, edges: Array, height: Array, bases: Interfaces, shares: tuple[Array, ...]
+    model: CraterModel, edges: Array, height: Array, bases: Interfaces, shares: Sequence[Array]
 ) -> tuple[Array, ...]:
     """Contrast of sediment, suevite, melt and breccia; exact integrals, so that mass does not depend on the mesh."""
     fill, column = model.fill, model.column
     middle = 0.5 * (edges[1:] + edges[:-1])
-    _, hollow, suevite, melt, breccia, _ = shares
-    filling = filling_density(fill, model.ground, middle)
-    if filling is None:
-        sediment = np.zeros(1)
-    else:
-        top, bottom = edges[:-1, None], edges[1:, None]
-        # Only layers above the deepest hollow hold any of it.
-        last = int(np.searchsorted(edges, bases.hollow.max(initial=0.0)))
-        upper, lower = top[:last], np.clip(bases.hollow, top[:last], bottom[:last])
-        intact = column.crust_mass(lower) - column.crust_mass(upper)
-        sediment = np.zeros_like(hollow)
-        sediment[:last] = hollow[:last] * filling[:last, None] - intact / height[:last]
+    hollow, suevite, melt, breccia = shares
     pores = column.porosity(middle)[:, None]
-    layering = np.zeros(1)
+    sheet = melt * (fill.melt_contrast + PORE_DEFICIT * pores)
     if fill.melt_layering:
         centre = np.clip(0.5 * (bases.suevite + bases.melt), edges[:-1, None], edges[1:, None])
         lower_half = np.clip(bases.melt, centre, edges[1:, None]) - centre
-        layering = fill.melt_layering * (lower_half / height - 0.5 * melt)
+        sheet = sheet + fill.melt_layering * (lower_half / height - 0.5 * melt)
     return (
-        sediment,
+        _filled_hollow(model, edges, height, bases.hollow, hollow),
         suevite * fill.suevite_contrast * bulking(pores, fill.suevite_crossover),
-        melt * (fill.melt_contrast + PORE_DEFICIT * pores) + layering,
+        sheet,
         breccia * fill.breccia_contrast * bulking(pores, fill.breccia_crossover),
     )
 
 
-def _uplift(model: CraterModel, edges: Array, floor: Array, rise: Array) -> tuple[Array, Array]:
+def _filled_hollow(model: CraterModel, edges: Array, height: Array, base: Array, share: Array) -> Array:
+    """Contrast of what fills the hollow, over the layers above its deepest point; nothing where it holds air."""
+    last = int(np.searchsorted(edges[:-1], base.max()))
+    filling = filling_density(model.fill, model.ground, 0.5 * (edges[1 : last + 1] + edges[:last]))
+    if filling is None:
+        return share[:0]
+    top, bottom = edges[:last, None], edges[1 : last + 1, None]
+    lower = np.minimum(np.maximum(base, top), bottom)
+    intact = model.column.crust_mass(lower) - model.column.crust_mass(top)
+    return share[:last] * filling[:, None] - intact / height[:last]
+
+
+def _uplift(model: CraterModel, edges: Array, floor: Array, rise: Array, cut: int) -> tuple[Array, Array]:
     """Mean contrast of the risen rock in every cell, crust and Moho apart.
 
     A cell holds the interval of the column that its rock came from; below the floor only, and linear within the cell
@@ -230,9 +245,8 @@ def _uplift(model: CraterModel, edges: Array, floor: Array, rise: Array) -> tupl
     length = np.maximum(source[1:] - source[:-1], 1e-9)
     excess = column.excess_mass(source)
     crust = (excess[1:] - excess[:-1]) / length - np.diff(column.excess_mass(edges))[:, None] / here
-    cut = int(np.searchsorted(edges, floor.max()))  # layers below this one are rock throughout
     if cut:
-        start = np.clip(floor, upper[:cut], lower[:cut])
+        start = np.minimum(np.maximum(floor, upper[:cut]), lower[:cut])
         share = (start - upper[:cut]) / here[:cut]
         source_start = source[:cut] + share * (source[1 : cut + 1] - source[:cut])
         left = np.maximum(1.0 - share, 1e-9)
@@ -240,7 +254,7 @@ def _uplift(model: CraterModel, edges: Array, floor: Array, rise: Array) -> tupl
         stayed = (column.excess_mass(lower[:cut]) - column.excess_mass(start)) / (here[:cut] * left)
         crust[:cut] = np.where(share < 1.0 - 1e-9, risen - stayed, 0.0)
     if model.displacement.moho_rise == 0 and model.rebound is None:
-        return crust, np.zeros(1)
+        return crust, crust[:0]
     mantle = np.clip(source[1:] - column.moho, 0.0, length) / length
     mantle_before = np.clip(lower - column.moho, 0.0, here) / here
     return crust, column.moho_contrast * (mantle - mantle_before)
