@@ -187,7 +187,7 @@ def _half_widths() -> Iterator[Check]:
 
 def _grids() -> Iterator[Check]:
     """Long prisms: a horizontal cylinder, and a cosine interface under a wide Gaussian window."""
-    east, north = np.arange(-40, 41) * 25.0, np.arange(-100, 101) * 2e3
+    east, north = np.arange(-40.0, 41.0) * 25.0, np.arange(-100.0, 101.0) * 2e3
     depth_edges = 500.0 + 25.0 * np.arange(41.0)
     west: Array = east[None, :] - 12.5
     top: Array = depth_edges[:-1, None] - 1000.0
@@ -198,7 +198,7 @@ def _grids() -> Iterator[Check]:
     yield _close("grid: horizontal cylinder falls to half at its depth", 0.5, float(row[80] / row[40]), 1e-4, unit="1")
 
     depth, window, step = 35e3, 400e3, 500.0
-    east, north = np.arange(-4000, 4001) * step, np.arange(-10, 11) * 50e3
+    east, north = np.arange(-4000.0, 4001.0) * step, np.arange(-10.0, 11.0) * 50e3
     for wavelength, value in ((60e3, 0.85882), (100e3, 3.72059), (180e3, 9.88746)):
         # 1 m of 8e5 kg/m³ carries the mass of 400 kg/m³ over 2 km; the window lifts the crest by exp(depth²/2window²)
         wave = 8e5 * np.cos(2.0 * math.pi * east / wavelength) * np.exp(-0.5 * (east / window) ** 2)
