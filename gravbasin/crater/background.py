@@ -25,13 +25,13 @@ def saturated_porosity(density: float) -> float:
 
 
 _SHIELD = ((0.0, 2680.0, 10.0, 0.0), (20.0, 2880.0, 5.0, 0.0))
-_BASIN = tuple((top, 2400.0 + 50.0 * top, 50.0, saturated_porosity(2425.0 + 50.0 * top)) for top in range(5))
+_BASIN = tuple((top, 2400.0 + 50.0 * top, 50.0, saturated_porosity(2450.0 + 50.0 * top)) for top in (0.0, 2.0, 4.0))
 
-PRESETS = {"crystalline": _SHIELD, "mixed": _SHIELD, "sedimentary": (*_BASIN, (5.0, 2730.0, 10.0, 0.0), _SHIELD[1])}
+PRESETS = {"crystalline": _SHIELD, "mixed": _SHIELD, "sedimentary": (*_BASIN, (6.0, 2740.0, 10.0, 0.0), _SHIELD[1])}
 """Layers by target rock: top (km), density there (kg/m³), gradient (kg/m³/km), porosity before impact.
 
 Shield: 2.67-2.72 at the top, 8-12 kg/m³ per km (Christensen & Mooney 1995, from memory). Sedimentary: sandstone and
-shale at the top (2.35-2.40) to compacted rock of 2.65 at 5 km, basement below (Telford et al. 1990, from memory)."""
+shale at the top (2.35-2.40) to compacted rock of 2.70 at 6 km, basement below (Telford et al. 1990, from memory)."""
 
 
 @dataclasses.dataclass(frozen=True)
@@ -90,13 +90,22 @@ class Column:
         z = np.asarray(depth, dtype=float)
         if not any(self.porosities):
             return np.zeros_like(z)
-        steps = np.diff(self.porosities, prepend=0.0)
-        steps[0] = 0.0
         total = np.full_like(z, self.porosities[0])
-        for top, step in zip(self.tops, steps, strict=True):
-            if step:
-                total += step * (z >= top)
+        for top, above, below in zip(self.tops[1:], self.porosities[:-1], self.porosities[1:], strict=True):
+            if above != below:
+                total += (below - above) * (z >= top)
         return total
+
+    def pore_volume(self, depth: ArrayLike) -> Array:
+        """Integral of `porosity` from the ground to a depth, m³/m²."""
+        z = np.asarray(depth, dtype=float)
+        if not any(self.porosities):
+            return np.zeros(1)
+        total = self.porosities[0] * z
+        for top, above, below in zip(self.tops[1:], self.porosities[:-1], self.porosities[1:], strict=True):
+            if above != below:
+                total += (below - above) * np.maximum(z - top, 0.0)
+        return np.asarray(total)
 
     @cached_property
     def _cumulative(self) -> tuple[Array, Array, Array, Array]:

@@ -165,7 +165,8 @@ def assemble(model: CraterModel, mesh: Mesh) -> Cells:
     bend = _bend(model, radius)
     bases = Interfaces(*(base - bend for base in model.fill.interfaces(radius)))
     cut = int(np.searchsorted(edges[:-1], bases.floor.max()))  # layers from here down are rock throughout
-    *shares, rock_above = _shares(edges[: cut + 1], height[:cut], bases)
+    cuts = _cuts(edges[: cut + 1], bases)
+    *shares, rock_above = ((lower - upper) / height[:cut] for upper, lower in pairwise(cuts))
     rock = np.empty((edges.size - 1, radius.size))
     rock[:] = np.diff(edges)[:, None] / height
     rock[:cut] = rock_above
@@ -180,7 +181,7 @@ def assemble(model: CraterModel, mesh: Mesh) -> Cells:
         change *= bulking(column.porosity(middle[:, None] + 0.5 * (rise[1:] + rise[:-1])), model.damage.crossover)
     solid = crust_rise + column.crust_density(middle)[:, None]
     fractures = change * (model.damage.fluid_density - solid) * rock
-    fills = _fill_parts(model, edges[: cut + 1], height[:cut], bases, shares)
+    fills = _fill_parts(model, edges[: cut + 1], height[:cut], bases, cuts, shares)
     return Cells(
         (*fills, fractures, rock * crust_rise, rock[: len(moho_rise)] * moho_rise), tuple(shares), rock, change, edges
     )
@@ -193,43 +194,48 @@ def _bend(model: CraterModel, radius: Array) -> Array:
     return model.rebound.rise(radius) - model.rebound.rise(model.outer_radius)
 
 
-def _shares(edges: Array, height: Array, bases: Interfaces) -> tuple[Array, ...]:
-    """Share of every cell in hollow, suevite, melt, breccia and rock."""
+def _cuts(edges: Array, bases: Interfaces) -> tuple[Array, ...]:
+    """Where each cell begins, is cut by the bases of hollow, suevite, melt and breccia, and ends; depths, m."""
     top, bottom = edges[:-1, None], edges[1:, None]
-    within = [np.minimum(np.maximum(base, top), bottom) for base in bases]  # where each base cuts the cell
-    return tuple((lower - upper) / height for upper, lower in pairwise([top, *within, bottom]))
+    return (top, *(np.minimum(np.maximum(base, top), bottom) for base in bases), bottom)
 
 
 def _fill_parts(
-    model: CraterModel, edges: Array, height: Array, bases: Interfaces, shares: Sequence[Array]
+    model: CraterModel,
+    edges: Array,
+    height: Array,
+    bases: Interfaces,
+    cuts: Sequence[Array],
+    shares: Sequence[Array],
 ) -> tuple[Array, ...]:
     """Contrast of sediment, suevite, melt and breccia; exact integrals, so that mass does not depend on the mesh."""
     fill, column = model.fill, model.column
-    middle = 0.5 * (edges[1:] + edges[:-1])
     hollow, suevite, melt, breccia = shares
-    pores = column.porosity(middle)[:, None]
-    sheet = melt * (fill.melt_contrast + PORE_DEFICIT * pores)
+    volumes = [column.pore_volume(cut) for cut in cuts[1:5]]
+    pores = [
+        (v - u) / np.maximum(lower - upper, 1e-9)
+        for (u, v), (upper, lower) in zip(pairwise(volumes), pairwise(cuts[1:5]), strict=True)
+    ]
+    sheet = melt * (fill.melt_contrast + PORE_DEFICIT * pores[1])
     if fill.melt_layering:
         centre = np.clip(0.5 * (bases.suevite + bases.melt), edges[:-1, None], edges[1:, None])
         lower_half = np.clip(bases.melt, centre, edges[1:, None]) - centre
         sheet = sheet + fill.melt_layering * (lower_half / height - 0.5 * melt)
     return (
-        _filled_hollow(model, edges, height, bases.hollow, hollow),
-        suevite * fill.suevite_contrast * bulking(pores, fill.suevite_crossover),
+        _filled_hollow(model, edges, height, cuts[1], hollow),
+        suevite * fill.suevite_contrast * bulking(pores[0], fill.suevite_crossover),
         sheet,
-        breccia * fill.breccia_contrast * bulking(pores, fill.breccia_crossover),
+        breccia * fill.breccia_contrast * bulking(pores[2], fill.breccia_crossover),
     )
 
 
 def _filled_hollow(model: CraterModel, edges: Array, height: Array, base: Array, share: Array) -> Array:
     """Contrast of what fills the hollow, over the layers above its deepest point; nothing where it holds air."""
-    last = int(np.searchsorted(edges[:-1], base.max()))
+    last = int(np.flatnonzero(share.any(axis=1)).max(initial=-1)) + 1
     filling = filling_density(model.fill, model.ground, 0.5 * (edges[1 : last + 1] + edges[:last]))
     if filling is None:
         return share[:0]
-    top, bottom = edges[:last, None], edges[1 : last + 1, None]
-    lower = np.minimum(np.maximum(base, top), bottom)
-    intact = model.column.crust_mass(lower) - model.column.crust_mass(top)
+    intact = model.column.crust_mass(base[:last]) - model.column.crust_mass(edges[:last])[:, None]
     return share[:last] * filling[:, None] - intact / height[:last]
 
 

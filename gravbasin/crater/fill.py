@@ -167,7 +167,7 @@ class Fill:
         return _fade(radius, flat * self.rim_radius, self.rim_radius)
 
     def _peak(self, radius: Array) -> Array:
-        if self.simple:
+        if self.simple or self.peak_height == 0.0:
             return np.zeros_like(radius)
         x = (radius - self.peak_radius) / self.peak_width
         return np.exp(-x * x)
