@@ -229,10 +229,33 @@ class Model(_Table):
 
     layers: int = Field(80, ge=20, le=400, description="layers of the section")
     rings: int = Field(160, ge=40, le=800, description="rings of the section")
-    grid_step_km: Positive | None = Field(None, description="step of the modelled grid; by default that of the map")
+    grid_step_km: Positive | None = Field(None, description="step of the modelled grid; by default 1/80 of the diameter")
     station_height_m: float = Field(1.0, ge=0.0, le=10000, description="height of the stations above today's ground, m")
     draws: int = Field(200, ge=20, le=20000, description="draws of the size-law scatter behind every band")
     scatter: bool = Field(True, description="let size laws and contrasts vary by their published scatter in the draws")
+
+
+class Prior(_Table):
+    """What is thought possible before the map is looked at."""
+
+    rim_diameter_km: tuple[Positive, Positive] | None = Field(
+        None, description="least and largest rim diameter, km; by default 0.6 and 1.6 times crater.rim_diameter_km"
+    )
+    erosion_km: tuple[NotNegative, NotNegative] | None = Field(
+        None, description="least and largest erosion, km; by default 0 and twice the scenario's plus 2 km"
+    )
+    models: int = Field(3000, ge=200, le=200000, description="models drawn for each kind of body")
+    odds: dict[str, Positive] = Field(
+        default_factory=dict, description="prior odds of a rival against an impact by its name; 1 where not given"
+    )
+
+    @model_validator(mode="after")
+    def _ascending(self) -> Prior:
+        for name in ("rim_diameter_km", "erosion_km"):
+            bounds = getattr(self, name)
+            if bounds is not None and bounds[1] <= bounds[0]:
+                raise ValueError(f"{name} must ascend, not {list(bounds)}; give [least, largest]")
+        return self
 
 
 class Inference(_Table):
@@ -263,6 +286,7 @@ class Scenario(_Table):
     observed: Observed | None = None
     noise: Noise = Noise()
     model: Model = Model()
+    prior: Prior = Prior()
     inference: Inference = Inference()
 
     @model_validator(mode="after")

@@ -36,6 +36,8 @@ class RingLikelihood:
         Orthonormal columns spanning the whitened regional.
     regional : (n, p) array
         The regional's columns as given.
+    log_determinant : float
+        Half the logarithm of |C| |X'C⁻¹X|: what a likelihood with the regional integrated out is divided by.
 
     Notes
     -----
@@ -47,6 +49,7 @@ class RingLikelihood:
     factor: Array
     nuisance: Array
     regional: Array
+    log_determinant: float
 
     @property
     def dof(self) -> int:
@@ -114,7 +117,9 @@ def ring_likelihood(covariance: Array, regional: Array) -> RingLikelihood:
         ) from None
     white = linalg.solve_triangular(factor, regional, lower=True)
     left, size, _ = np.linalg.svd(white, full_matrices=False)
-    return RingLikelihood(factor, left[:, size > 1e-6 * size[0]], regional)
+    kept = size > 1e-6 * size[0]
+    log_determinant = float(np.sum(np.log(np.diag(factor))) + np.sum(np.log(size[kept])))
+    return RingLikelihood(factor, left[:, kept], regional, log_determinant)
 
 
 def total_scatter(templates: Array) -> Array:

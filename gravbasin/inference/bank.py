@@ -1,0 +1,237 @@
+"""Banks of models: thousands of draws from a family's prior, forwarded in batches, kept as radial profiles."""
+
+from __future__ import annotations
+
+import dataclasses
+from collections.abc import Callable, Mapping
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from gravbasin.crater import CraterModel, Mesh, contrast, crater_model, shared_mesh
+from gravbasin.errors import CannotFinish
+from gravbasin.forward.rings import ring_table
+from gravbasin.scenario import Scenario
+
+__all__ = ["Bank", "Family", "ImpactFamily", "Range", "build_bank"]
+
+Array = NDArray[np.float64]
+KM = 1000.0
+
+BANK_LAYERS, BANK_RINGS = 40, 96
+"""Cells of the mesh a bank shares: coarse is enough, thin units keep their mass (tested against the default mesh)."""
+
+BATCH = 256
+
+
+@dataclasses.dataclass(frozen=True)
+class Range:
+    """Prior of one parameter: uniform, or uniform in the logarithm, between two bounds (in the parameter's unit)."""
+
+    low: float
+    high: float
+    logarithmic: bool = False
+
+    def _scaled(self, value: Array | float) -> Array:
+        return np.log(value) if self.logarithmic else np.asarray(value, dtype=float)
+
+    def draw(self, rng: np.random.Generator, n: int) -> Array:
+        """Independent draws, (n,)."""
+        drawn = rng.uniform(self._scaled(self.low), self._scaled(self.high), n)
+        return np.exp(drawn) if self.logarithmic else drawn
+
+    def share(self, inner: Range) -> float:
+        """Prior probability of a narrower range of the same kind."""
+        whole = self._scaled(self.high) - self._scaled(self.low)
+        return float((self._scaled(inner.high) - self._scaled(inner.low)) / whole) if whole > 0 else 1.0
+
+    def contains(self, value: Array) -> NDArray[np.bool_]:
+        """Whether values lie within the bounds."""
+        return np.asarray((value >= self.low) & (value <= self.high))
+
+
+class Family(Protocol):
+    """A kind of body with priors on its main parameters."""
+
+    @property
+    def name(self) -> str:
+        """Shown in tables."""
+
+    @property
+    def ranges(self) -> Mapping[str, Range]:
+        """Prior of every main parameter, by name with its unit."""
+
+    def mesh(self, ranges: Mapping[str, Range]) -> Mesh:
+        """Cells that hold every model within the ranges."""
+
+    def draw(
+        self, main: Mapping[str, float], mesh: Mesh, rng: np.random.Generator
+    ) -> tuple[Array, Mapping[str, float]]:
+        """Contrast (depth, radius), kg/m³, of one model with these main parameters, and further named results."""
+
+
+@dataclasses.dataclass(frozen=True, eq=False)
+class Bank:
+    """Models of one family.
+
+    Attributes
+    ----------
+    name : str
+        The family.
+    parameters : dict of (n_model,) arrays
+        Main parameters and further results of every model, by name with unit.
+    radius : (n_radius,) array, m
+        Radii of the profiles.
+    profiles : (n_model, n_radius) array, mGal
+        Anomalies.
+    log_weight : (n_model,) array
+        Logarithm of prior over proposal density; zero when drawn from the prior.
+    """
+
+    name: str
+    parameters: Mapping[str, Array]
+    radius: Array
+    profiles: Array
+    log_weight: Array
+
+    @property
+    def size(self) -> int:
+        """Number of models."""
+        return int(self.log_weight.size)
+
+
+@dataclasses.dataclass(frozen=True)
+class ImpactFamily:
+    """Impact structures about a scenario: diameter and erosion from their priors, everything else from its scatter."""
+
+    scenario: Scenario
+
+    @property
+    def name(self) -> str:
+        """Shown in tables."""
+        return "eroded impact structure"
+
+    @property
+    def ranges(self) -> Mapping[str, Range]:
+        """Rim diameter (uniform in its logarithm) and erosion (uniform), km."""
+        prior, crater = self.scenario.prior, self.scenario.crater
+        diameter = prior.rim_diameter_km or (0.6 * crater.rim_diameter_km, 1.6 * crater.rim_diameter_km)
+        erosion = prior.erosion_km or (0.0, 2.0 * self._erosion_km() + 2.0)
+        return {"rim_diameter_km": Range(*diameter, logarithmic=True), "erosion_km": Range(*erosion)}
+
+    def _erosion_km(self) -> float:
+        from gravbasin.crater.model import ground_of
+
+        return ground_of(self.scenario).erosion / KM
+
+    def _varied(self, diameter_km: float, erosion_km: float) -> Scenario:
+        history = self.scenario.history.model_copy(
+            update={"erosion_km": erosion_km, "erosion_rate_m_per_myr": None, "events": self._events(erosion_km)}
+        )
+        crater = self.scenario.crater.model_copy(update={"rim_diameter_km": diameter_km})
+        return self.scenario.model_copy(update={"crater": crater, "history": history})
+
+    def _events(self, erosion_km: float) -> tuple[object, ...]:
+        """The scenario's list of episodes with all erosion scaled to the wanted total, or none where none is given."""
+        events = self.scenario.history.events
+        total = self._erosion_km()
+        if not events or total == 0.0:
+            return events
+        factor = erosion_km / total
+        return tuple(
+            e if e.erode_km is None else e.model_copy(update={"erode_km": factor * e.erode_km}) for e in events
+        )
+
+    def mesh(self, ranges: Mapping[str, Range]) -> Mesh:
+        """Cells for the widest, deepest and least eroded structure in the ranges, with room for scatter."""
+        corners = [
+            crater_model(self._varied(d, e))
+            for d in (ranges["rim_diameter_km"].low, ranges["rim_diameter_km"].high)
+            for e in (ranges["erosion_km"].low, ranges["erosion_km"].high)
+        ]
+        return _deeper(shared_mesh(corners, layers=BANK_LAYERS, rings=BANK_RINGS), 1.3)
+
+    def draw(
+        self, main: Mapping[str, float], mesh: Mesh, rng: np.random.Generator
+    ) -> tuple[Array, Mapping[str, float]]:
+        """One structure with its laws and contrasts drawn."""
+        model = crater_model(self._varied(main["rim_diameter_km"], main["erosion_km"]), rng)
+        return contrast(model, mesh), _results(model)
+
+
+def _results(model: CraterModel) -> dict[str, float]:
+    return {
+        "moho_uplift_km": model.dimensions.moho_uplift_km,
+        "structural_uplift_km": model.dimensions.structural_uplift_km,
+        "melt_volume_km3": model.dimensions.melt_volume_km3,
+    }
+
+
+def _deeper(mesh: Mesh, factor: float) -> Mesh:
+    return Mesh(factor * mesh.depth_edges, mesh.radius_edges)
+
+
+def build_bank(
+    family: Family,
+    radius: Array,
+    *,
+    models: int,
+    height: float,
+    rng: np.random.Generator,
+    ranges: Mapping[str, Range] | None = None,
+    progress: Callable[[int, int], None] | None = None,
+) -> Bank:
+    """Draw models of a family and forward them.
+
+    Parameters
+    ----------
+    family : Family
+        What to draw.
+    radius : (n_radius,) array, m
+        Radii of the profiles.
+    models : int
+        How many.
+    height : float, m
+        Stations above the ground.
+    rng : numpy Generator
+        Source of randomness.
+    ranges : mapping, optional
+        Narrower ranges to draw from; weights make up for it (see `Bank.log_weight`).
+    progress : callable, optional
+        Called with (done, models) after each batch.
+
+    Returns
+    -------
+    Bank
+        With "excess_mass_kg" among its parameters.
+
+    Raises
+    ------
+    CannotFinish
+        The bank would need more than 2 GiB.
+    """
+    if 8 * models * radius.size > 2**31:
+        raise CannotFinish(f"a bank of {models} models needs more than 2 GiB; lower prior.models")
+    wanted = dict(ranges or family.ranges)
+    mesh = family.mesh(wanted)
+    main = {name: r.draw(rng, models) for name, r in wanted.items()}
+    table = ring_table(radius, mesh.radius_edges, mesh.depth_edges, height_m=height)
+    volume = np.outer(np.diff(mesh.depth_edges), np.pi * np.diff(mesh.radius_edges**2)).ravel()
+    profiles = np.empty((models, radius.size))
+    results: dict[str, list[float]] = {}
+    mass: list[Array] = []
+    for start in range(0, models, BATCH):
+        stop = min(start + BATCH, models)
+        batch = np.empty((stop - start, mesh.depth.size, mesh.radius.size))
+        for i in range(start, stop):
+            batch[i - start], extra = family.draw({k: float(v[i]) for k, v in main.items()}, mesh, rng)
+            for key, value in extra.items():
+                results.setdefault(key, []).append(value)
+        profiles[start:stop] = table.anomaly(batch)
+        mass.append(batch.reshape(stop - start, -1) @ volume)
+        if progress is not None:
+            progress(stop, models)
+    share = float(np.prod([family.ranges[name].share(r) for name, r in wanted.items()]))
+    parameters = {**main, **{k: np.array(v) for k, v in results.items()}, "excess_mass_kg": np.concatenate(mass)}
+    return Bank(family.name, parameters, radius, profiles, np.full(models, np.log(share)))

@@ -1,0 +1,201 @@
+"""How well each family explains the ring means: likelihood of whole banks, evidence, posterior, effective size."""
+
+from __future__ import annotations
+
+import dataclasses
+from collections.abc import Mapping, Sequence
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import special
+
+from gravbasin.inference.bank import Bank
+from gravbasin.inference.likelihood import RingLikelihood
+
+__all__ = ["Level", "Posterior", "evidence", "fit_level", "log_likelihood", "weighted_quantile"]
+
+Array = NDArray[np.float64]
+
+
+@dataclasses.dataclass(frozen=True)
+class Level:
+    """How rough the crust is from place to place: the noise variance relative to the model, as an inverse gamma.
+
+    Attributes
+    ----------
+    scale : float
+        Typical variance relative to the noise model; 1 where the model holds on average.
+    dof : float
+        Degrees of freedom: small where roughness differs much from place to place.
+    """
+
+    scale: float = 1.0
+    dof: float = 10.0
+
+
+def log_likelihood(likelihood: RingLikelihood, templates: Array, data: Array, level: Level) -> Array:
+    """Log-likelihood of every datum under every template, the regional and the local noise level integrated out.
+
+    Parameters
+    ----------
+    likelihood : RingLikelihood
+        Covariance of the ring means under the noise.
+    templates : (n_ring, n_model) array, mGal
+        Ring means of the models.
+    data : (n_ring, n_place) array, mGal
+        Ring means about places.
+    level : Level
+        Prior of the noise level: the density is a multivariate Student's t.
+
+    Returns
+    -------
+    (n_place, n_model) array
+    """
+    chi2 = _chi2(likelihood.whiten(templates), likelihood.whiten(data))
+    return _student(chi2, likelihood, level)
+
+
+def _chi2(white_models: Array, white_data: Array) -> Array:
+    cross = white_data.T @ white_models
+    cross *= -2.0
+    cross += np.sum(white_models**2, axis=0)
+    cross += np.sum(white_data**2, axis=0)[:, None]
+    return np.maximum(cross, 0.0, out=cross)
+
+
+def _student(chi2: Array, likelihood: RingLikelihood, level: Level) -> Array:
+    n, nu = likelihood.dof, level.dof
+    base = nu * level.scale
+    constant = special.gammaln(0.5 * (nu + n)) - special.gammaln(0.5 * nu) - 0.5 * n * np.log(np.pi)
+    constant += 0.5 * nu * np.log(base) - likelihood.log_determinant
+    chi2 += base
+    np.log(chi2, out=chi2)
+    chi2 *= -0.5 * (nu + n)
+    chi2 += constant
+    return chi2
+
+
+def fit_level(misfits: Array, dof: int, independent: float) -> Level:
+    """Roughness from place to place, from the noise-only chi-square at many places of the map.
+
+    Parameters
+    ----------
+    misfits : (n_place,) array
+        Chi-square of the ring means under noise alone.
+    dof : int
+        Its degrees of freedom.
+    independent : float
+        How many of the places are independent (they overlap).
+
+    Returns
+    -------
+    Level
+        Posterior mode under ln(scale) ~ N(0, 0.5) and ln(dof) ~ N(ln 10, 1): chi²/dof over scale is F(dof, level.dof)
+        where the variance is an inverse gamma.
+    """
+    if misfits.size < 10 or independent < 2.0:
+        return Level()
+    from scipy import optimize, stats
+
+    ratio = np.asarray(misfits) / dof
+    weight = min(independent, misfits.size) / misfits.size
+
+    def objective(theta: Array) -> float:
+        scale, nu = np.exp(theta)
+        fit = np.sum(stats.f.logpdf(ratio / scale, dof, nu) - theta[0]) * weight
+        return float(-fit + 0.5 * (theta[0] / 0.5) ** 2 + 0.5 * (theta[1] - np.log(10.0)) ** 2)
+
+    best = optimize.minimize(objective, [0.0, np.log(10.0)], method="Nelder-Mead", options={"xatol": 1e-3})
+    scale, nu = np.exp(best.x)
+    return Level(float(scale), float(np.clip(nu, 3.0, 200.0)))
+
+
+@dataclasses.dataclass(frozen=True, eq=False)
+class Posterior:
+    """What the ring means say about one family.
+
+    Attributes
+    ----------
+    name : str
+        The family.
+    log_evidence, standard_error : float
+        Logarithm of the mean likelihood over the prior, and its Monte Carlo error.
+    effective_size : float
+        Number of equally weighted models the posterior is worth; below about 50 intervals are rough.
+    weights : (n_model,) array
+        Posterior weight of every model of the bank, summing to 1.
+    bank : Bank
+        The models.
+    """
+
+    name: str
+    log_evidence: float
+    standard_error: float
+    effective_size: float
+    weights: Array
+    bank: Bank
+
+    def interval(self, parameter: str, probability: float = 0.9) -> tuple[float, float, float]:
+        """Median, lower and upper bound of the central interval of a parameter."""
+        tails = [0.5, 0.5 - probability / 2, 0.5 + probability / 2]
+        median, low, high = weighted_quantile(self.bank.parameters[parameter], self.weights, tails)
+        return float(median), float(low), float(high)
+
+    def correlation(self, first: str, second: str) -> float:
+        """Posterior correlation of two parameters: near ±1 they cannot be told apart."""
+        table = np.stack([self.bank.parameters[first], self.bank.parameters[second]])
+        covariance = np.cov(table, aweights=self.weights)
+        spread = np.sqrt(np.diag(covariance))
+        return float(covariance[0, 1] / (spread[0] * spread[1])) if spread.all() else float("nan")
+
+
+def evidence(
+    likelihoods: Sequence[RingLikelihood], templates: Array, data: Array, bank: Bank, level: Level
+) -> Posterior:
+    """Evidence and posterior of one bank for one place, averaged over plausible noise models.
+
+    Parameters
+    ----------
+    likelihoods : sequence of RingLikelihood
+        Under plausible noise models, equally weighted.
+    templates : (n_ring, n_model) array, mGal
+        Ring means of the bank's models.
+    data : (n_ring,) array, mGal
+        Observed ring means.
+    bank : Bank
+        The models and their weights.
+    level : Level
+        Prior of the local noise level.
+    """
+    logs = np.stack([log_likelihood(each, templates, data[:, None], level)[0] for each in likelihoods])
+    log_models = special.logsumexp(logs, axis=0) - np.log(len(likelihoods)) + bank.log_weight
+    total = special.logsumexp(log_models)
+    weights = np.exp(log_models - total)
+    size = 1.0 / float(np.sum(weights**2))
+    error = float(np.sqrt(max(1.0 / size - 1.0 / weights.size, 0.0)))
+    return Posterior(bank.name, float(total - np.log(weights.size)), error, size, weights, bank)
+
+
+def weighted_quantile(values: Array, weights: Array, probabilities: Sequence[float]) -> Array:
+    """Quantiles of weighted values, (n_probability,)."""
+    order = np.argsort(values)
+    cumulative = np.cumsum(weights[order])
+    cumulative -= 0.5 * weights[order]
+    return np.asarray(np.interp(probabilities, cumulative / np.sum(weights), values[order]))
+
+
+def merged(first: Bank, second: Bank, inside: Mapping[str, tuple[float, float]]) -> Bank:
+    """A prior bank and one drawn within `inside`, as one sample of the prior: each stands for its own region."""
+    keep = np.ones(first.size, dtype=bool)
+    for name, (low, high) in inside.items():
+        keep &= (first.parameters[name] >= low) & (first.parameters[name] <= high)
+    outside = ~keep
+    total = int(outside.sum()) + second.size
+    # Mean over the merged sample must equal P(in) mean_in + P(out) mean_out.
+    weight_out = first.log_weight[outside] + np.log(total / first.size)
+    weight_in = second.log_weight + np.log(total / second.size)
+    parameters = {
+        name: np.concatenate([values[outside], second.parameters[name]]) for name, values in first.parameters.items()
+    }
+    profiles = np.concatenate([first.profiles[outside], second.profiles])
+    return Bank(first.name, parameters, first.radius, profiles, np.concatenate([weight_out, weight_in]))
