@@ -1,6 +1,7 @@
 """The field of net rise: volumes that balance at every depth, no jumps, the Moho's rise at the Moho."""
 
 import dataclasses
+import itertools
 
 import numpy as np
 import pytest
@@ -25,8 +26,8 @@ def test_at_every_depth_what_rose_also_sank(rim: float, share: float) -> None:
         return float(u.net_rise([depth], [r])[0, 0]) * r
 
     edges = np.linspace(0.0, 1100.0 * rim, 12)
-    volume = sum(quad(ring, a, b, epsabs=1e-9 * rim)[0] for a, b in zip(edges[:-1], edges[1:], strict=True))
-    moved = sum(quad(lambda r: abs(ring(r)), a, b, limit=200)[0] for a, b in zip(edges[:-1], edges[1:], strict=True))
+    volume = sum(quad(ring, a, b, epsabs=1e-9 * rim)[0] for a, b in itertools.pairwise(edges))
+    moved = sum(quad(lambda r: abs(ring(r)), a, b, limit=200)[0] for a, b in itertools.pairwise(edges))
     assert abs(volume) <= 1e-7 * moved
 
 

@@ -1,5 +1,7 @@
 """Rebound of an elastic plate: numbers, closed form against quadrature, limits."""
 
+import itertools
+
 import numpy as np
 import pytest
 from scipy.integrate import quad
@@ -19,7 +21,7 @@ def test_closed_form_is_the_hankel_integral(radius: float) -> None:
         return float(j1(k * 50e3) * j0(k * radius) / (1 + (plate.length * k) ** 4))
 
     steps = np.linspace(0.0, 60.0 / plate.length, 121)
-    total = sum(quad(integrand, a, b, epsabs=1e-14)[0] for a, b in zip(steps[:-1], steps[1:], strict=True))
+    total = sum(quad(integrand, a, b, epsabs=1e-14)[0] for a, b in itertools.pairwise(steps))
     assert rebound.rise(radius) == pytest.approx(2700 / 3300 * 1000 * 50e3 * total, abs=0.01)
 
 
