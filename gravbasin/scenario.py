@@ -84,6 +84,9 @@ class Background(_Table):
     )
     moho_km: float = Field(35.0, gt=5, le=90, description="depth of the Moho before impact, km")
     mantle_density_kg_m3: Density = Field(3300.0, description="density below the Moho, kg/m³")
+    density_scatter_kg_m3: NotNegative = Field(
+        0.0, description="standard deviation of one shift of every layer in the draws, kg/m³"
+    )
     cover_density_kg_m3: Density = Field(2450.0, description="density of the sedimentary cover (mixed targets), kg/m³")
     cover_porosity: float | None = Field(
         None, ge=0, le=0.7, description="porosity of that cover, 0-1; by default from its density, grains 2700 kg/m³"
@@ -108,6 +111,9 @@ class Damage(_Table):
         "exponential", description="how porosity decays below the floor"
     )
     porosity: float = Field(0.08, ge=0, le=0.4, description="fracture porosity at the floor, 0-1")
+    porosity_scatter: NotNegative = Field(
+        0.3, description="standard deviation of the logarithm of that porosity in the draws"
+    )
     decay_km: Positive | None = Field(None, description="decay length, km; by default min(0.12 D, 3 km)")
     closure_pressure_mpa: Positive = Field(200.0, description="pressure of the rock column that closes cracks, MPa")
     pressure_exponent: Positive = Field(1.0, description="exponent n of the pressure form (1 - P/Pc)^n")
@@ -185,6 +191,34 @@ class History(_Table):
             raise ValueError("events replace erosion_km, erosion_rate_m_per_myr and burial_km; give one or the other")
         if self.erosion_km is not None and self.erosion_rate_m_per_myr:
             raise ValueError("erosion_km and erosion_rate_m_per_myr exclude each other; keep one")
+        return self
+
+
+class Samples(_Table):
+    """Laboratory samples that narrow the target's density and the porosity of its fractures."""
+
+    path: Path = Field(description="CSV table of densities, porosities, velocities, positions, minerals")
+    centre_easting_km: float = Field(0.0, description="easting of the centre in the table's coordinates, km")
+    centre_northing_km: float = Field(0.0, description="northing of the centre, km")
+    outlier_scores: Positive = Field(3.5, description="robust standard scores beyond which a sample is set aside")
+
+
+class RivalBody(_Table):
+    """A body other than an impact structure that could make the anomaly; it joins the rivals known already."""
+
+    name: str = Field(min_length=1, description="name shown in tables; that of a known rival replaces it")
+    shape: Literal["plug", "ring complex", "diapir", "basin", "dome"] = Field(
+        description="plug with straight walls, ring complex, salt diapir, bowl-shaped basin, or dome"
+    )
+    ranges: dict[str, tuple[float, float]] = Field(
+        default_factory=dict, description="least and largest value of the shape's parameters; the rest as usual"
+    )
+
+    @model_validator(mode="after")
+    def _ascending(self) -> RivalBody:
+        for name, (low, high) in self.ranges.items():
+            if not (low < high and abs(low) < float("inf") and abs(high) < float("inf")):
+                raise ValueError(f"range of {name} must ascend, not {[low, high]}; give [least, largest]")
         return self
 
 
@@ -283,6 +317,8 @@ class Scenario(_Table):
     damage: Damage = Damage()
     fill: Fill = Fill()
     history: History = History()
+    samples: Samples | None = None
+    rivals: tuple[RivalBody, ...] = ()
     observed: Observed | None = None
     noise: Noise = Noise()
     model: Model = Model()

@@ -17,6 +17,9 @@ from gravbasin.scenario import Scenario
 
 __all__ = ["ScenarioError", "load_scenario", "parse_override", "scenario_hash", "scenario_toml"]
 
+_FILES = ("observed", "samples")
+"""Tables whose `path` may be relative."""
+
 
 class ScenarioError(InputError):
     """Every fault of one scenario file, one line each."""
@@ -63,7 +66,7 @@ def load_scenario(path: str | Path, overrides: Mapping[str, Any] | None = None) 
     _check_overrides(changes, where)
     for dotted, value in changes.items():
         _set(tree, dotted, value)
-    if "observed.path" in changes:
+    if any(f"{name}.path" in changes for name in _FILES):
         _anchor(tree, Path.cwd())
     return _validated(tree, where)
 
@@ -89,8 +92,9 @@ def parse_override(text: str) -> tuple[str, Any]:
 def scenario_hash(scenario: Scenario) -> str:
     """SHA-256 of the scenario without the map's folder, so that a moved project keeps its hash."""
     tree = scenario.model_dump(mode="json")
-    if scenario.observed is not None:
-        tree["observed"]["path"] = scenario.observed.path.name
+    for name in _FILES:
+        if tree[name] is not None:
+            tree[name]["path"] = Path(tree[name]["path"]).name
     return hashlib.sha256(json.dumps(tree, sort_keys=True).encode()).hexdigest()
 
 
@@ -191,6 +195,7 @@ def _set(tree: dict[str, Any], dotted: str, value: Any) -> None:
 
 
 def _anchor(tree: dict[str, Any], folder: Path) -> None:
-    table = tree.get("observed")
-    if isinstance(table, dict) and isinstance(table.get("path"), (str, Path)):
-        table["path"] = str(folder / Path(table["path"]).expanduser())
+    for name in _FILES:
+        table = tree.get(name)
+        if isinstance(table, dict) and isinstance(table.get("path"), (str, Path)):
+            table["path"] = str(folder / Path(table["path"]).expanduser())

@@ -32,14 +32,14 @@ CONTRAST_SCATTER = {
     "breccia contrast": 0.35,
     "suevite contrast": 0.25,
     "melt contrast": 0.40,
-    "fracture porosity": 0.30,
     "porosity decay": 0.20,
     "closure pressure": 0.15,
     "density gradient": 0.20,
 }
 """Standard deviation of the natural logarithm of each contrast, from the published ranges (sediment -200..-900,
-breccia -150..-400, suevite -300..-600, melt -50..-200 kg/m³, porosity 0.05-0.12, decay 2-4 km, closure 150-200 MPa,
-gradient 8-12 kg/m³/km)."""
+breccia -150..-400, suevite -300..-600, melt -50..-200 kg/m³, decay 2-4 km, closure 150-200 MPa, gradient 8-12 kg/m³
+per km);
+that of the fracture porosity (0.05-0.12) is `damage.porosity_scatter`."""
 
 STEEPEST = 0.8
 """Decrease of the rise per metre of depth at which a law's uplift is limited; rock turns over at 1."""
@@ -119,7 +119,8 @@ def crater_model(scenario: Scenario, rng: np.random.Generator | None = None) -> 
         rng=rng,
     )
     factor = _contrast_factors(rng)
-    column = _column(scenario, factor["density gradient"])
+    shift = 0.0 if rng is None else scenario.background.density_scatter_kg_m3 * rng.standard_normal()
+    column = _column(scenario, factor["density gradient"], shift)
     ground = ground_of(scenario)
     if ground.erosion >= column.moho:
         raise InputError(
@@ -139,13 +140,14 @@ def _contrast_factors(rng: np.random.Generator | None) -> dict[str, float]:
     return {name: math.exp(s * rng.standard_normal()) for name, s in CONTRAST_SCATTER.items()}
 
 
-def _column(scenario: Scenario, gradient_factor: float) -> Column:
+def _column(scenario: Scenario, gradient_factor: float, shift: float) -> Column:
     background, crater = scenario.background, scenario.crater
     moho, cover = KM * background.moho_km, KM * crater.cover_thickness_km
     layers = [
         (layer.top_km, layer.density_kg_m3, layer.gradient_kg_m3_per_km, layer.porosity) for layer in background.layers
     ] or [layer for layer in PRESETS[crater.target_rock] if layer[0] < background.moho_km]
     tops, densities, slopes, pores = (list(a) for a in zip(*layers, strict=True))
+    densities = [density + shift for density in densities]
     tops, slopes = [KM * top for top in tops], [gradient_factor * slope / KM for slope in slopes]
     crust = Column(tuple(tops), tuple(densities), tuple(slopes), moho, background.mantle_density_kg_m3, tuple(pores))
     return _covered(crust, cover, background.cover_density_kg_m3, background.cover_porosity) if cover > 0 else crust
@@ -274,6 +276,7 @@ def _damage(
 ) -> Damage:
     given, crater = scenario.damage, scenario.crater
     left = sealing(crater.setting, crater.age_myr, sealed=SEALED_FRACTURES).draw(rng)
+    opened = 1.0 if rng is None else math.exp(given.porosity_scatter * rng.standard_normal())
     diameter_km = dims.rim_diameter_km
     suppression = given.core_suppression
     if suppression is None:
@@ -282,7 +285,7 @@ def _damage(
     fluid = given.pore_fluid or ("sea water" if crater.setting == "marine" else "fresh water")
     return Damage(
         form=given.form,
-        porosity=min(given.porosity * factor["fracture porosity"], 0.4),
+        porosity=min(given.porosity * opened, 0.4),
         decay=KM * decay_km * factor["porosity decay"],
         base=KM * dims.fracture_base_km,
         closure_pressure=1e6 * given.closure_pressure_mpa * factor["closure pressure"],
