@@ -18,6 +18,8 @@ from gravbasin.observed import NoiseModel, polynomial_basis, ring_covariance, si
 __all__ = ["Chance", "Stencil", "chance_test", "local_statistic"]
 
 Array = NDArray[np.float64]
+Nodes = tuple[NDArray[np.intp], NDArray[np.intp]]
+"""Rows and columns of grid nodes."""
 
 ENOUGH_CENTRES = 200
 """With fewer other centres on the map, random fields of the fitted noise stand in for them."""
@@ -112,13 +114,13 @@ class Stencil:
         """Nodes from the middle to the edge, northing and easting."""
         return self.shape[0] // 2, self.shape[1] // 2
 
-    def ring_means(self, values: Array, rows: Array, columns: Array) -> Array:
+    def ring_means(self, values: Array, rows: NDArray[np.intp], columns: NDArray[np.intp]) -> Array:
         """Ring means about grid nodes, (n_ring, n_centre), mGal; NaN where the stencil meets a node without data."""
         windows = np.lib.stride_tricks.sliding_window_view(values, self.shape)
         blocks = np.array_split(np.arange(rows.size), max(1, rows.size * self.weights.shape[1] // 4_000_000))
         return np.concatenate([self.weights @ self._columns(windows, rows[b], columns[b]) for b in blocks], axis=1)
 
-    def _columns(self, windows: Array, rows: Array, columns: Array) -> Array:
+    def _columns(self, windows: Array, rows: NDArray[np.intp], columns: NDArray[np.intp]) -> Array:
         picked = windows[rows - self.half[0], columns - self.half[1]]
         return np.asarray(picked.reshape(rows.size, -1).T)
 
@@ -198,7 +200,7 @@ def chance_test(
 
 def _other_centres(
     observed: xr.DataArray, stencil: Stencil, centre: tuple[float, float], exclude_radius: float
-) -> tuple[Array, Array]:
+) -> Nodes:
     """Rows and columns of the nodes about which every ring is complete, away from the structure."""
     half_n, half_e = stencil.half
     rows, columns = (
