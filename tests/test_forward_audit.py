@@ -2,6 +2,8 @@
 
 import dataclasses
 import json
+import subprocess
+import sys
 
 import numpy as np
 import pytest
@@ -147,3 +149,11 @@ def test_selfcheck_notices_an_engine_that_is_off_by_a_thousandth(engine, monkeyp
     assert sum(word in row.name for row in failed) >= 2
     with pytest.raises(dataclasses.FrozenInstanceError):
         failed[0].passed = True
+
+
+def test_importing_the_room_loads_neither_harmonica_nor_numba():
+    code = (
+        "import sys, gravbasin.forward; print({'harmonica', 'numba', 'verde', 'matplotlib', 'dask'} & set(sys.modules))"
+    )
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    assert done.stdout.strip() == "set()"

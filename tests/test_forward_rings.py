@@ -9,7 +9,7 @@ from gravbasin.constants import GRAVITATIONAL_CONSTANT, SI_TO_MGAL
 from gravbasin.errors import InputError
 from gravbasin.forward import closed_forms as exact
 from gravbasin.forward import ring_anomaly, ring_table
-from gravbasin.forward.bodies import section_of
+from gravbasin.forward.bodies import revolution_section, section_of
 from gravbasin.forward.elliptic import cel
 from gravbasin.forward.flat import disc_potential
 from gravbasin.labels import read_provenance
@@ -126,6 +126,23 @@ def test_eroded_is_uneroded_less_the_slab_removed():
     assert_allclose(
         new_ground.anomaly(contrast) - new_ground.anomaly(removed), eroded, atol=1e-12 * np.abs(eroded).max()
     )
+
+
+def test_an_eroded_paraboloid_is_a_smaller_paraboloid():
+    """Why erosion and size cannot be told apart from a bowl alone: stripping e leaves radius a√(1 − e/h), depth h − e."""
+
+    def bowl(radius, depth, layers):
+        rings = np.concatenate([np.linspace(0.0, 8e3, 60), [9e3, 10e3, 11e3]])
+        outline = lambda z: radius * np.sqrt(np.maximum(1 - z / depth, 0.0))  # noqa: E731
+        return revolution_section(outline, layers, rings, contrast=lambda z: np.full_like(z, -200.0))
+
+    layers, stations = np.linspace(0.0, 2e3, 41), np.linspace(0.0, 15e3, 9)
+    large = bowl(1e4, 2e3, layers).isel(depth=slice(15, None), depth_edges=slice(15, None))
+    eroded = ring_anomaly(large, stations, height_m=-layers[15])
+    small = ring_anomaly(
+        bowl(1e4 * np.sqrt(1 - layers[15] / 2e3), 2e3 - layers[15], layers[15:] - layers[15]), stations
+    )
+    assert_allclose(eroded, small, rtol=1e-10)
 
 
 def test_attraction_scales_with_size():

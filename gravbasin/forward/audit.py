@@ -21,7 +21,7 @@ __all__ = ["Audit", "audit_anomaly"]
 
 Array = NDArray[np.float64]
 
-_MAX_PAIRS = 2e7  # prism-station pairs of the direct sum: a few seconds on one core
+_MAX_PAIRS = 1e7  # prism-station pairs of the direct sum: about two seconds on one core
 _FEWEST_STATIONS = 5
 _PROFILE_STATIONS = 25
 _GRID_STATIONS = 100

@@ -9,13 +9,12 @@ from typing import Any
 import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
-from scipy import fft
 
 from gravbasin.constants import GRAVITATIONAL_CONSTANT, SI_TO_MGAL
 from gravbasin.discs import ring_fractions
 from gravbasin.errors import GravbasinWarning, InputError
+from gravbasin.forward.convolution import EvenConvolution
 from gravbasin.forward.cost import MEMORY_LIMIT_GIB, GridCost, refuse_above
-from gravbasin.forward.elliptic import row_blocks
 from gravbasin.forward.rectangles import rectangle_potentials
 from gravbasin.forward.result import anomaly_array
 from gravbasin.forward.sections import RingCells, ascending, ring_cells
@@ -27,7 +26,6 @@ Array = NDArray[np.float64]
 
 _NEGLIGIBLE = 0.005  # of the peak contrast: below this the rim of a model, or what a grid cuts off, is not worth a word
 _SMALLEST_CELL = 1.0  # metres; anything smaller is a grid in degrees
-_WORKERS = 2
 
 
 def layered_prisms(
@@ -261,27 +259,17 @@ def grid_anomaly(
 
 
 def _convolve(layers: PrismLayers, height_m: float, half_period: tuple[int, int]) -> Array:
-    shape, (m_n, m_e) = layers.density.shape[1:], half_period
-    total = np.zeros((2 * m_n, m_e + 1), dtype=complex)
-    quadrant = np.zeros((m_n + 1, m_e + 1))
-    fold = np.minimum(np.arange(2 * m_n), 2 * m_n - np.arange(2 * m_n))  # the kernel's spectrum is even
-    for edge, depth in enumerate(layers.depth_edges):
-        step = _density_step(layers.density, edge)
-        if not step.any():
-            continue
-        quadrant[: shape[0], : shape[1]] = rectangle_potentials(shape, layers.spacing, depth + height_m)
-        kernel = fft.dctn(quadrant, type=1, workers=_WORKERS)
-        rows = fft.rfft(step, 2 * m_e, axis=1, workers=_WORKERS)  # before padding the other way: half the rows are zero
-        spectrum = fft.fft(rows, 2 * m_n, axis=0, workers=_WORKERS)
-        for block in row_blocks(*total.shape):
-            total[block] += spectrum[block] * kernel[fold[block]]
-    columns = fft.ifft(total, axis=0, overwrite_x=True, workers=_WORKERS)[: shape[0]]
-    anomaly = fft.irfft(columns, 2 * m_e, axis=1, workers=_WORKERS)[:, : shape[1]]
-    return np.ascontiguousarray(anomaly) * (GRAVITATIONAL_CONSTANT * SI_TO_MGAL)
+    """Sum over depth edges of the kernel of the edge, convolved with the step of density across it."""
+    shape = layers.density.shape[1:]
+    step, quadrant = np.empty(shape), np.empty((half_period[1] + 1, half_period[0] + 1))
+    with EvenConvolution(shape, half_period) as convolution:
+        for edge, depth in enumerate(layers.depth_edges):
+            np.subtract(_layer(layers.density, edge), _layer(layers.density, edge - 1), out=step)
+            if step.any():
+                rectangle_potentials(quadrant.shape, layers.spacing[::-1], depth + height_m, out=quadrant)
+                convolution.add(step, quadrant)
+        return convolution.result() * (GRAVITATIONAL_CONSTANT * SI_TO_MGAL)
 
 
-def _density_step(density: Array, edge: int) -> Array:
-    """Density below a depth edge less the density above it: the top of one layer is the bottom of the other."""
-    if edge == 0:
-        return density[0]
-    return density[edge] - density[edge - 1] if edge < density.shape[0] else -density[-1]
+def _layer(density: Array, index: int) -> Array | float:
+    return density[index] if 0 <= index < density.shape[0] else 0.0
