@@ -129,7 +129,7 @@ def test_eroded_is_uneroded_less_the_slab_removed():
 
 
 def test_an_eroded_paraboloid_is_a_smaller_paraboloid():
-    """Why erosion and size cannot be told apart from a bowl alone: stripping e leaves radius a√(1 − e/h), depth h − e."""
+    """Why a bowl alone cannot tell erosion from size: stripping e leaves radius a√(1 − e/h) and depth h − e."""
 
     def bowl(radius, depth, layers):
         rings = np.concatenate([np.linspace(0.0, 8e3, 60), [9e3, 10e3, 11e3]])
