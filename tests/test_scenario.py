@@ -205,7 +205,7 @@ def test_command_line_overrides(text: str, expected: tuple) -> None:
 
 @pytest.mark.parametrize("text", ["history.erosion_km", "=3", ""])
 def test_overrides_without_key_or_value_are_refused(text: str) -> None:
-    with pytest.raises(InputError, match="table.key=value"):
+    with pytest.raises(InputError, match=r"table\.key=value"):
         parse_override(text)
 
 
@@ -226,6 +226,9 @@ def test_a_scenario_cannot_be_changed_in_place() -> None:
         scenario.seed = 3
 
 
-@pytest.mark.parametrize("path", sorted(Path(__file__).parents[1].joinpath("configs").glob("*.toml")), ids=lambda p: p.stem)
+CONFIGS = sorted(Path(__file__).parents[1].joinpath("configs").glob("*.toml"))
+
+
+@pytest.mark.parametrize("path", CONFIGS, ids=lambda p: p.stem)
 def test_every_scenario_that_ships_loads(path: Path) -> None:
     assert load_scenario(path).name
