@@ -1,0 +1,179 @@
+"""The figures of an assessment, each with its title, caption and a description for those who cannot see it."""
+
+from __future__ import annotations
+
+import dataclasses
+from typing import TYPE_CHECKING
+
+from scipy import stats
+
+from gravbasin.report.canvas import svg
+from gravbasin.report.map_figure import map_figure
+from gravbasin.report.odds_figures import chance_figure, detectability_figure
+from gravbasin.report.profile_figures import parts_figure, profile_figure
+from gravbasin.report.section_figure import section_figure
+from gravbasin.report.words import given, number, percent, plus_minus, probability, signed
+
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
+
+    from gravbasin.runs.assess import Assessment
+    from gravbasin.runs.compare import Comparison
+
+__all__ = ["Drawing", "assessment_figures"]
+
+KM = 1000.0
+
+
+@dataclasses.dataclass(frozen=True, eq=False)
+class Drawing:
+    """One figure as text.
+
+    Attributes
+    ----------
+    name : str
+        Name of its file, and prefix of every id inside.
+    title, caption : str
+        What stands above and below it.
+    svg : str
+        The figure itself.
+    """
+
+    name: str
+    title: str
+    caption: str
+    svg: str
+
+
+def assessment_figures(result: Assessment) -> dict[str, Drawing]:
+    """Every figure an assessment has, by name; without a map there are no maps and no chance figure."""
+    drawings = [_section(result), _profile(result), _parts(result), _detectability(result)]
+    if result.comparison is not None:
+        drawings.append(_maps(result, result.comparison))
+        if result.comparison.chance is not None:
+            drawings.append(_chance(result.comparison))
+    return {drawing.name: drawing for drawing in drawings}
+
+
+def _drawing(figure: Figure, name: str, title: str, caption: str, description: str) -> Drawing:
+    return Drawing(name, title, caption, svg(figure, name=name, title=title, description=description))
+
+
+def _rim_radius(result: Assessment) -> float:
+    return 0.5 * KM * result.scenario.crater.rim_diameter_km
+
+
+def _anomaly_in_words(result: Assessment) -> str:
+    m = result.verdict["model"]
+    centre, peak = signed(m["centre_mgal"]), signed(m["peak_mgal"])
+    return f"The modelled anomaly is {centre} mGal at the centre and {peak} at most."
+
+
+def _section(result: Assessment) -> Drawing:
+    return _drawing(
+        section_figure(result.modelled.section, result.profile, rim_radius_m=_rim_radius(result)),
+        "section",
+        "Cross-section",
+        "The structure cut through its axis, and mirrored about it: the anomaly it makes, the density contrast to the "
+        "intact column, and the units. Thin full contours mark a surplus, dashed ones a deficit; the heavy line is "
+        "today's ground.",
+        "Cross-section through the axis: anomaly above, density contrast and units below, against distance and depth. "
+        + _anomaly_in_words(result),
+    )
+
+
+def _maps(result: Assessment, comparison: Comparison) -> Drawing:
+    east, north = (given(c / KM) for c in comparison.rings.centre)
+    disc = float(comparison.rings.edges_m[-1])
+    return _drawing(
+        map_figure(
+            comparison.maps, centre_m=comparison.rings.centre, rim_radius_m=_rim_radius(result), disc_radius_m=disc
+        ),
+        "maps",
+        "Maps",
+        f"Distances from the given centre, easting {east} km and northing {north} km. Full circle: the rim. Dashed "
+        f"circle: the disc that was tested, {given(disc / KM)} km in radius. The regional drawn here was fitted "
+        "outside the structure and serves the eye only; every number in this report estimates it together with the "
+        "structure.",
+        "Four maps on the same axes: observed, regional, observed minus regional, and modelled anomaly. "
+        + _anomaly_in_words(result),
+    )
+
+
+def _profile(result: Assessment) -> Drawing:
+    if result.comparison is None:
+        rest = "No map was compared, so only the model is drawn."
+    else:
+        rest = (
+            "Observed ring means have the jointly estimated regional removed. Their errors are correlated: "
+            "neighbouring rings err together, so a run of points on one side is no news. The misfit test counts that."
+        )
+    return _drawing(
+        profile_figure(result.profile, rim_radius_m=_rim_radius(result)),
+        "profile",
+        "Radial profile",
+        f"Anomaly against distance from the centre; the band holds 90 % of the draws from the scatter of size laws and "
+        f"contrasts. {rest}",
+        "Anomaly against distance from the centre. " + _anomaly_in_words(result),
+    )
+
+
+def _parts(result: Assessment) -> Drawing:
+    centre = result.profile.parts.isel(radius=0)
+    listed = ", ".join(f"{name} {signed(float(centre.sel(part=name)))} mGal" for name in centre.part.values)
+    return _drawing(
+        parts_figure(result.profile, rim_radius_m=_rim_radius(result)),
+        "parts",
+        "What makes the anomaly",
+        "The modelled anomaly split by cause; the causes add up to the heavy line. A cause without any contrast left "
+        "today (worn away, or never there) has no line.",
+        f"Modelled anomaly by cause, against distance. At the centre: {listed}.",
+    )
+
+
+def _detectability(result: Assessment) -> Drawing:
+    d = result.verdict["detectability"]
+    threshold = float(stats.norm.isf(d["false_alarm_probability"]))
+    return _drawing(
+        detectability_figure(
+            snr=d["snr"],
+            snr_low=d["snr_low"],
+            snr_high=d["snr_high"],
+            threshold=threshold,
+            false_alarm=d["false_alarm_probability"],
+            detected=d["detection_probability"],
+        ),
+        "detectability",
+        "Could it be seen?",
+        "A filter made for this structure returns one number. Dashed: what noise alone gives. Full line: what noise "
+        "and the structure give. The bar holds 90 % of the expected values over plausible noise and the scatter of "
+        "the structure. This is for a place, size and sign known beforehand; a search over a map needs more.",
+        f"Two bell curves: noise alone about 0, with the structure about {number(d['snr'], 2)}; the threshold is at "
+        f"{number(threshold)}. Detection probability {probability(d['detection_probability'])}.",
+    )
+
+
+def _chance(comparison: Comparison) -> Drawing:
+    chance = comparison.chance
+    assert chance is not None
+    share = percent(chance.p_value, chance.standard_error)
+    if chance.source == "map":
+        where = f"{chance.centres} other centres on this map, which overlap: about {chance.independent:.0f} "
+        where += "structures of this size fit side by side, and the error counts those"
+    else:
+        where = f"{chance.centres} random fields of the noise model, because the map has too little room for others"
+    return _drawing(
+        chance_figure(
+            chance.null,
+            chance.statistic,
+            p_value=chance.p_value,
+            standard_error=chance.standard_error,
+            source=chance.source,
+        ),
+        "chance",
+        "How often by chance?",
+        f"The same statistic at {where}. Hatched: those that do as well as the structure, {share}. The centre and the "
+        "size were given, not searched for.",
+        f"Histogram of the statistic elsewhere; the structure has {plus_minus(chance.statistic, 0.1)}; "
+        f"{share} do as well.",
+    )

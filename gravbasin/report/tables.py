@@ -1,0 +1,206 @@
+"""The tables of an assessment's report: rows of quantity, value and what it means."""
+
+from __future__ import annotations
+
+import dataclasses
+from collections.abc import Mapping
+from typing import Any, NamedTuple
+
+from gravbasin.crater import CraterDimensions
+from gravbasin.report.words import given, number, percent, plus_minus, probability, signed
+
+__all__ = ["Row", "audit_rows", "dimension_rows", "key_numbers", "noise_rows"]
+
+Verdict = Mapping[str, Any]
+
+
+class Row(NamedTuple):
+    """One line of a table."""
+
+    quantity: str
+    value: str
+    meaning: str = ""
+
+
+def key_numbers(verdict: Verdict) -> dict[str, list[Row]]:
+    """The main results by theme; themes that the run has no results for are left out."""
+    themes = {"Structure": _structure, "Anomaly": _anomaly, "Detectability": _detectability}
+    themes |= {"Fit to the map": _fit} if "fit" in verdict else {}
+    themes |= {"Chance": _chance} if "chance" in verdict else {}
+    return {theme: rows(verdict) for theme, rows in themes.items()}
+
+
+def _structure(verdict: Verdict) -> list[Row]:
+    m = verdict["model"]
+    return [
+        Row("rim diameter when fresh", f"{given(m['rim_diameter_km'])} km"),
+        Row("erosion", f"{given(m['erosion_km'])} km", "rock stripped below the ground before impact"),
+        Row("burial", f"{given(m['burial_km'])} km", "sediment over the worn surface today"),
+        Row("excess mass", f"{number(m['excess_mass_kg'])} kg", "negative: a deficit to the intact column"),
+    ]
+
+
+def _anomaly(verdict: Verdict) -> list[Row]:
+    m = verdict["model"]
+    half_width = m["half_width_km"]
+    reach = "not reached" if half_width is None else f"{number(half_width)} km"
+    return [
+        Row("largest", f"{signed(m['peak_mgal'])} mGal"),
+        Row("at the centre", f"{signed(m['centre_mgal'])} mGal"),
+        Row("half-width", reach, "radius at which it has fallen to half of the largest"),
+        Row("computed on", {"flat": "a flat Earth", "sphere": "a spherical Earth"}.get(m["earth"], m["earth"])),
+    ]
+
+
+def _detectability(verdict: Verdict) -> list[Row]:
+    d = verdict["detectability"]
+    short, long = d["wavelengths_km"]
+    return [
+        Row(
+            "signal-to-noise ratio",
+            f"{number(d['snr'], 2)} ({number(d['snr_low'], 2)} to {number(d['snr_high'], 2)})",
+            "in brackets 5–95 % over plausible noise and the structure's scatter",
+        ),
+        Row("ratio needed", number(d["required_snr"], 2), "for the detection probability the scenario asks"),
+        Row("detection probability", probability(d["detection_probability"]), "mean over the same scatter"),
+        Row("false alarm probability", given(d["false_alarm_probability"]), "accepted; known place, one trial"),
+        Row(
+            "wavelengths that carry it",
+            f"{number(short, 2)} to {number(long, 2)} km",
+            "if shorter than the map resolves, the noise model makes the detection, not the map",
+        ),
+    ]
+
+
+def _fit(verdict: Verdict) -> list[Row]:
+    f = verdict["fit"]
+    return [
+        Row(
+            "misfit",
+            f"χ² = {number(f['chi2'])} for {f['dof']} degrees of freedom",
+            "noise and the model's scatter counted, regional free",
+        ),
+        Row(
+            "p-value of the misfit",
+            probability(f["p_value"]),
+            "how often one as large arises if the model is true",
+        ),
+        Row(
+            "best multiple of the model",
+            plus_minus(f["amplitude"], f["amplitude_standard_error"]),
+            "1 if the model has the right size, 0 if there is nothing",
+        ),
+        Row("rings compared", f"{f['rings']}, to {given(f['outer_radius_km'])} km from the centre"),
+    ]
+
+
+def _chance(verdict: Verdict) -> list[Row]:
+    c = verdict["chance"]
+    source = {"map": "other centres on this map", "random fields": "random fields of the noise model"}
+    rows = [
+        Row("share that does as well", percent(c["p_value"], c["standard_error"]), "false alarms of this very test"),
+        Row("tried", f"{c['centres']} {source.get(c['source'], c['source'])}"),
+        Row("statistic at the structure", signed(c["statistic"], 2), "amplitude over its error, local noise level"),
+    ]
+    if c["source"] == "map":
+        rows.append(
+            Row(
+                "independent places",
+                f"about {c['independent_places']:.0f}",
+                "that fit side by side",
+            )
+        )
+    return rows
+
+
+_DIMENSIONS = {
+    "rim_diameter_km": "rim diameter",
+    "transient_diameter_km": "transient cavity, diameter",
+    "transient_depth_km": "transient cavity, depth",
+    "apparent_depth_km": "original ground to top of the impact fill",
+    "rim_height_km": "height of the rim",
+    "peak_height_km": "central peak or ring above the fill",
+    "structural_uplift_km": "structural uplift below the centre",
+    "central_uplift_diameter_km": "base of the central uplift, diameter",
+    "peak_ring_diameter_km": "crest of the peak ring, diameter",
+    "melt_volume_km3": "melt, volume",
+    "melt_diameter_km": "melt sheet, diameter",
+    "melt_thickness_km": "melt sheet, mean thickness",
+    "breccia_thickness_km": "breccia lens, thickness",
+    "suevite_thickness_km": "suevite, thickness",
+    "fracture_base_km": "base of fractures below the floor",
+    "moho_uplift_km": "rise of the Moho",
+}
+
+
+class DimensionRow(NamedTuple):
+    """One dimension of the fresh structure."""
+
+    quantity: str
+    value: str
+    unit: str
+    origin: str
+    source: str
+
+
+def dimension_rows(dimensions: CraterDimensions) -> list[DimensionRow]:
+    """Every dimension with where it comes from: given, law, drawn, or derived from the others."""
+    rows = []
+    for field in dataclasses.fields(dimensions):
+        name, value = field.name, getattr(dimensions, field.name)
+        if not isinstance(value, float):
+            continue
+        fallback = ("given", "scenario") if name == "rim_diameter_km" else ("derived", "from the others")
+        origin = dimensions.origin.get(name, fallback[0])
+        source = dimensions.source.get(name, fallback[1])
+        remarks = [source, dimensions.validity[name]] if name in dimensions.validity else [source]
+        stem, _, unit = name.rpartition("_")
+        rows.append(
+            DimensionRow(
+                _DIMENSIONS.get(name, stem.replace("_", " ")),
+                given(value) if origin == "given" else number(value),
+                {"km": "km", "km3": "km³"}.get(unit, unit),
+                origin,
+                "; ".join(remarks),
+            )
+        )
+    return rows
+
+
+def noise_rows(verdict: Verdict) -> list[Row]:
+    """The noise model, with errors where it was estimated."""
+    n = verdict["noise"]
+    errors = n.get("relative_errors", {})
+
+    def value(name: str, key: str, unit: str) -> str:
+        if name not in errors:
+            return f"{given(n[key])} {unit}".strip()
+        return f"{number(n[key])} {unit}".strip() + f", within ±{number(100 * errors[name], 2)} %"
+
+    return [
+        Row("model", n["model"].replace("matern", "Matérn") + " field plus nugget"),
+        Row("standard deviation", value("sill", "sill_mgal", "mGal"), "of the correlated part: the geology"),
+        Row("correlation range", value("range", "range_km", "km"), "how far one place knows of another"),
+        Row("smoothness", value("smoothness", "smoothness", ""), "the map's spectrum falls as k to the −(2ν + 2)"),
+        Row("nugget", value("nugget", "nugget_mgal", "mGal"), "differs from node to node"),
+        Row("regional", ("constant", "plane", "quadratic surface")[n["regional_order"]], "fitted with the structure"),
+    ]
+
+
+_AUDIT = {
+    "reference": ("reference engine", "an independent code, run on the same prisms"),
+    "stations": ("stations", "points, picked at random, at which it was run"),
+    "max_abs_difference_mgal": ("largest difference to it", "error of the fast engine: rounding only, if it is right"),
+    "discretisation_error_mgal": ("discretisation", "change with a finer section, or with squares instead of rings"),
+    "flat_earth_error_mgal": ("flat Earth", "difference between a flat and a spherical Earth for this structure"),
+}
+
+
+def audit_rows(verdict: Verdict) -> list[Row]:
+    """Every number of the audit and what it means."""
+    rows = []
+    for key, value in verdict["audit"].items():
+        quantity, meaning = _AUDIT.get(key, (key.removesuffix("_mgal").replace("_", " "), ""))
+        unit = " mGal" if key.endswith("_mgal") else ""
+        rows.append(Row(quantity, str(value) if isinstance(value, (str, int)) else number(value, 2) + unit, meaning))
+    return rows
