@@ -34,7 +34,7 @@ def detectability_figure(
     """
     figure = blank_figure(3.3)
     axes = figure.add_axes((0.04, 0.15, 0.92, 0.83))
-    left, right = min(-3.8, snr_low - 2.5, snr - 3.5), max(snr_high + 0.5, snr + 3.8, threshold + 3.8)
+    left, right = min(-3.8, snr_low - 2.5, snr - 3.5), max(snr_high + 0.5, snr + 3.8, threshold + 4.6)
     x = np.linspace(left, right, 600)
     noise, signal = _normal(x), _normal(x - snr)
     found = x >= threshold
@@ -47,7 +47,7 @@ def detectability_figure(
     _name(axes, "with the structure", snr + 1.05 * outward, MODEL, outward)
     note: dict[str, Any] = {"fontsize": SMALL, "color": INK, "va": "top"}
     by_noise = f"noise alone passes {threshold:.1f}\nwith probability {given(false_alarm)}"
-    by_signal = f"the structure passes it with\nprobability {probability(detected)}, on average"
+    by_signal = f"the structure passes it with\nprobability {probability(detected)} (mean over the bar below)"
     axes.text(threshold - 0.12, 0.56, by_noise, ha="right", **note)
     axes.text(threshold + 0.12, 0.56, by_signal, ha="left", **note)
     _interval(axes, snr, snr_low, snr_high)
@@ -96,7 +96,7 @@ def chance_figure(null: Array, statistic: float, *, p_value: float, standard_err
     edges = statistic + width * steps
     counts, _ = np.histogram(null, edges)
     beyond, _ = np.histogram(null[null >= statistic], edges)
-    place = {"map": "at other places of this map", "random fields": "in random fields of the fitted noise"}
+    place = {"map": "at other places of this map", "random fields": "in random fields of the noise"}
     axes.bar(edges[:-1], counts, np.diff(edges), align="edge", color="#d8d8d8", edgecolor="white", linewidth=0.4)
     axes.bar(edges[:-1], beyond, np.diff(edges), align="edge", color=BAND, edgecolor=MODEL, linewidth=0.4, hatch="////")
     top = 1.25 * max(int(counts.max()), 1)
