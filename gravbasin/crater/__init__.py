@@ -6,6 +6,7 @@ from gravbasin.crater.dimensions import CraterDimensions, crater_dimensions
 from gravbasin.crater.model import CraterModel, crater_model
 from gravbasin.crater.priors import Range
 from gravbasin.crater.rivals import KNOWN_RIVALS, Rival, rivals_of
+from gravbasin.crater.samples import SampleUpdate, with_samples
 from gravbasin.crater.section import UNITS, density_section, section_parts
 
 __all__ = [
@@ -18,6 +19,7 @@ __all__ = [
     "Mesh",
     "Range",
     "Rival",
+    "SampleUpdate",
     "contrast",
     "contrast_parts",
     "crater_dimensions",
@@ -28,4 +30,5 @@ __all__ = [
     "rivals_of",
     "section_parts",
     "shared_mesh",
+    "with_samples",
 ]
