@@ -232,7 +232,9 @@ class Observed(_Table):
     centre_easting_km: float = Field(0.0, description="easting of the structure's centre in the map's coordinates, km")
     centre_northing_km: float = Field(0.0, description="northing of the centre, km")
     resolution_km: Positive | None = Field(
-        None, description="half the shortest wavelength the map holds, km; by default twice the grid step"
+        None,
+        description="half the shortest wavelength the map holds, km, where it is smoother than its grid: the model is "
+        "smoothed alike; left out, the model is not smoothed and noise rests on nodes two steps apart",
     )
 
 
