@@ -17,6 +17,7 @@ Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
 NotNegative = Annotated[float, Field(ge=0, allow_inf_nan=False)]
 Density = Annotated[float, Field(gt=0, le=6000, allow_inf_nan=False)]
 Contrast = Annotated[float, Field(ge=-2000, le=2000, allow_inf_nan=False)]
+Azimuth = Annotated[float, Field(ge=0, le=360)]
 Probability = Annotated[float, Field(gt=0, lt=1)]
 
 
@@ -194,6 +195,50 @@ class History(_Table):
         return self
 
 
+class Deformation(_Table):
+    """What bent, cut or half buried the structure after it formed; nothing by default.
+
+    Azimuths run clockwise from north. Stretch comes first, then uneven erosion, then tilt, all about the centre at
+    today's ground; the missing sector and the edge of the cover are drawn on today's map.
+    """
+
+    tilt_degrees: float = Field(0.0, ge=0, le=20, description="tilt of the whole block about its centre, degrees")
+    tilt_azimuth_degrees: Azimuth = Field(0.0, description="direction in which the tilted block dips down, degrees")
+    stretch_ratio: float = Field(
+        1.0, ge=1, le=4, description="long over short axis of a circle drawn before the stretch; areas are kept"
+    )
+    stretch_azimuth_degrees: Azimuth = Field(0.0, description="direction of the long axis, degrees")
+    erosion_slope_m_per_km: float = Field(
+        0.0, ge=0, le=200, description="growth of the erosion across the structure, its own where the centre is, m/km"
+    )
+    erosion_slope_azimuth_degrees: Azimuth = Field(0.0, description="direction in which the erosion deepens, degrees")
+    missing_from_degrees: Azimuth | None = Field(
+        None, description="a sector without contrast begins at this azimuth and runs clockwise, degrees"
+    )
+    missing_to_degrees: Azimuth | None = Field(None, description="azimuth at which that sector ends, degrees")
+    cover_thickness_km: NotNegative = Field(
+        0.0, description="younger sediment over one side only, the structure lowered beneath it as much, km"
+    )
+    cover_edge_km: float = Field(
+        0.0, allow_inf_nan=False, description="distance from the centre to the straight edge of that cover, km"
+    )
+    cover_azimuth_degrees: Azimuth = Field(0.0, description="direction from the centre to the covered side, degrees")
+    cover_contrast_kg_m3: Contrast | None = Field(
+        None, description="density of that cover minus that of the rock beside it, kg/m³; needed with a thickness"
+    )
+
+    @model_validator(mode="after")
+    def _whole(self) -> Deformation:
+        sector = (self.missing_from_degrees, self.missing_to_degrees)
+        if (sector[0] is None) != (sector[1] is None):
+            raise ValueError("a missing sector needs missing_from_degrees and missing_to_degrees; give both")
+        if sector[0] is not None and sector[1] is not None and (sector[1] - sector[0]) % 360.0 == 0.0:
+            raise ValueError("a missing sector must be more than nothing and less than everything; change one azimuth")
+        if (self.cover_thickness_km > 0) != (self.cover_contrast_kg_m3 is not None):
+            raise ValueError("a one-sided cover needs cover_thickness_km and cover_contrast_kg_m3; give both")
+        return self
+
+
 class Samples(_Table):
     """Laboratory samples that narrow the target's density and the porosity of its fractures."""
 
@@ -319,6 +364,7 @@ class Scenario(_Table):
     damage: Damage = Damage()
     fill: Fill = Fill()
     history: History = History()
+    deformation: Deformation = Deformation()
     samples: Samples | None = None
     rivals: tuple[RivalBody, ...] = ()
     observed: Observed | None = None
