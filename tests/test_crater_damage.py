@@ -82,7 +82,10 @@ def test_given_retention_wins_over_setting_and_age() -> None:
 
 def test_porous_rock_opens_less_and_changes_sign_at_the_crossover() -> None:
     """Low below about 7 % porosity before impact, high above (Milbury et al. 2015)."""
-    np.testing.assert_allclose(bulking([0.0, 0.035, 0.07, 0.105, 0.3], 0.07), [1.0, 0.5, 0.0, -0.5, -0.5], atol=1e-12)
+    before = [0.0, 0.035, 0.07, 0.105, 0.3]
+    np.testing.assert_allclose(bulking(before, 0.07, least=-0.5), [1.0, 0.5, 0.0, -0.5, -0.5], atol=1e-12)
+    np.testing.assert_allclose(bulking(before, 0.07), [1.0, 0.5, 0.0, 0.0, 0.0], atol=1e-12)  # water resists crushing
+    assert dataclasses.replace(OPEN, fluid_density=0.0).least_bulking < 0 == OPEN.least_bulking
 
 
 def test_porosity_is_suppressed_with_depth_so_amplitude_can_level_off() -> None:

@@ -178,7 +178,8 @@ def assemble(model: CraterModel, mesh: Mesh) -> Cells:
     below_floor[:cut] = 0.5 * (np.maximum(edges[:cut, None], bases.floor) + edges[1 : cut + 1, None]) - bases.floor
     change = model.damage.open_porosity(below_floor, radius, STANDARD_GRAVITY * weight)
     if any(column.porosities):
-        change *= bulking(column.porosity(middle[:, None] + 0.5 * (rise[1:] + rise[:-1])), model.damage.crossover)
+        before = column.porosity(middle[:, None] + 0.5 * (rise[1:] + rise[:-1]))
+        change *= bulking(before, model.damage.crossover, least=model.damage.least_bulking)
     solid = crust_rise + column.crust_density(middle)[:, None]
     fractures = change * (model.damage.fluid_density - solid) * rock
     fills = _fill_parts(model, edges[: cut + 1], height[:cut], bases, cuts, shares)

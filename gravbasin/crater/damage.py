@@ -19,6 +19,9 @@ FLUID_DENSITY = {"fresh water": 1000.0, "sea water": 1030.0, "dry": 0.0}
 SEALED_FRACTURES, SEALED_BRECCIA = 0.25, 0.1
 """Share of the land contrast that sea-water sealing left in fractures and breccia (Sturkell et al. 1998)."""
 
+DRY_BULKING = -0.5
+"""Least share of the new porosity in dry porous rock; negative because shock crushes its pores (by choice)."""
+
 OLD_MYR = 1000.0
 """Age from which cracks on land may be as sealed as those under the sea, Myr: two anchors only, common practice."""
 
@@ -64,14 +67,14 @@ def sealing(setting: str, age_myr: float | None, *, sealed: float) -> Sealing:
     return Sealing(1.0 if age_myr is None else math.sqrt(lowest), lowest, 1.0)
 
 
-def bulking(porosity_before: ArrayLike, crossover: float) -> Array:
+def bulking(porosity_before: ArrayLike, crossover: float, *, least: float = 0.0) -> Array:
     """Share of the new porosity that rock takes on which was porous already.
 
-    1 in dense rock, 0 at the crossover, negative beyond it: shock then closes more pores than it opens (sign change
-    near 7 % porosity: Milbury et al. 2015; linear between by choice). Not below -0.5, because pores full of water
-    resist crushing (common practice).
+    1 in dense rock, 0 at the crossover (near 7 % for fractures: Milbury et al. 2015; linear between by choice). Beyond
+    it, shock closes more pores than it opens only where they are dry, as in that lunar work: `least` is then -0.5 by
+    choice. Pores full of water resist crushing, so `least` is 0 (common practice).
     """
-    return np.maximum(1.0 - np.asarray(porosity_before, dtype=float) / crossover, -0.5)
+    return np.maximum(1.0 - np.asarray(porosity_before, dtype=float) / crossover, least)
 
 
 @dataclasses.dataclass(frozen=True)
@@ -120,6 +123,11 @@ class Damage:
     core_radius: float
     fluid_density: float
     crossover: float = 0.07
+
+    @property
+    def least_bulking(self) -> float:
+        """Lower end of `bulking`: negative where pores are dry and can be crushed."""
+        return DRY_BULKING if self.fluid_density == 0.0 else 0.0
 
     def open_porosity(self, below_floor: Array, radius: Array, pressure: Array) -> Array:
         """Porosity that is open today in rock that was dense before the impact (`bulking` reduces it in porous rock).
