@@ -150,23 +150,16 @@ def selfcheck(quick: bool, quiet: bool) -> None:
 
 
 def _print_checks(checks: Any) -> None:
-    from rich.console import Console
-    from rich.table import Table
-
-    table = Table(title="engines against closed forms and harmonica", show_edge=False)
-    for heading, justify in (("check", "left"), ("expected", "right"), ("obtained", "right"), ("difference", "right")):
-        table.add_column(heading, justify=justify)  # type: ignore[arg-type]  # a literal by construction
-    table.add_column("")
+    width = max(len(check.name) for check in checks)
+    click.echo(f"{'check':<{width}}  {'expected':>14} {'obtained':>14} {'difference':>10}")
     for check in checks:
-        mark = "ok" if check.passed else "FAILED"
-        table.add_row(
-            check.name,
-            f"{check.expected:.6g} {check.unit}",
-            f"{check.obtained:.6g} {check.unit}",
-            f"{check.difference:.1e}",
-            mark,
+        unit = "" if check.unit == "1" else f" {check.unit}"
+        click.echo(
+            f"{check.name:<{width}}  {check.expected:>14.7g} {check.obtained:>14.7g} {check.difference:>10.1e}"
+            f"{unit}{'' if check.passed else '  FAILED'}"
         )
-    Console().print(table)
+    passed = sum(check.passed for check in checks)
+    click.echo(f"\n{passed} of {len(checks)} checks passed")
 
 
 @contextmanager

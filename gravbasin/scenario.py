@@ -345,6 +345,10 @@ class Inference(_Table):
     false_alarm_probability: Probability = Field(0.001, description="accepted probability of a false alarm")
     detection_probability: Probability = Field(0.5, description="least probability of detection to call it visible")
     consistent_p_value: Probability = Field(0.05, description="a misfit less probable than this is inconsistent")
+    chance_p_value: Probability = Field(0.05, description="share of other places below which a circle stands out")
+    separation: float = Field(
+        6.0, ge=0, description="twice the log evidence by which an impact must lead every rival to be separable"
+    )
     outer_radius_in_diameters: float = Field(1.5, ge=0.75, le=4, description="radius of the tested disc, diameters")
     station_spacing_km: Positive = Field(5.0, description="station spacing assumed where there is no map, km")
     chance_centres: int = Field(1000, ge=0, le=100000, description="other centres tried on the map")

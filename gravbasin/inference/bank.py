@@ -12,11 +12,12 @@ from scipy.optimize import brentq
 
 from gravbasin.crater import CraterModel, Mesh, contrast, crater_model, shared_mesh
 from gravbasin.crater.model import ground_of
+from gravbasin.crater.priors import Range
 from gravbasin.errors import CannotFinish
 from gravbasin.forward.rings import ring_table
 from gravbasin.scenario import Event, Scenario
 
-__all__ = ["Bank", "Family", "ImpactFamily", "Range", "build_bank"]
+__all__ = ["Bank", "Family", "ImpactFamily", "build_bank"]
 
 Array = NDArray[np.float64]
 KM = 1000.0
@@ -26,32 +27,6 @@ BANK_LAYERS, BANK_RINGS = 40, 128
 of the peak of the default mesh, single points near a sharp rim within 2.5 % (tested)."""
 
 BATCH = 256
-
-
-@dataclasses.dataclass(frozen=True)
-class Range:
-    """Prior of one parameter: uniform, or uniform in the logarithm, between two bounds (in the parameter's unit)."""
-
-    low: float
-    high: float
-    logarithmic: bool = False
-
-    def _scaled(self, value: Array | float) -> Array:
-        return np.log(value) if self.logarithmic else np.asarray(value, dtype=float)
-
-    def draw(self, rng: np.random.Generator, n: int) -> Array:
-        """Independent draws, (n,)."""
-        drawn = rng.uniform(self._scaled(self.low), self._scaled(self.high), n)
-        return np.exp(drawn) if self.logarithmic else drawn
-
-    def share(self, inner: Range) -> float:
-        """Prior probability of a narrower range of the same kind."""
-        whole = self._scaled(self.high) - self._scaled(self.low)
-        return float((self._scaled(inner.high) - self._scaled(inner.low)) / whole) if whole > 0 else 1.0
-
-    def contains(self, value: Array) -> NDArray[np.bool_]:
-        """Whether values lie within the bounds."""
-        return np.asarray((value >= self.low) & (value <= self.high))
 
 
 class Family(Protocol):
@@ -65,7 +40,7 @@ class Family(Protocol):
     def ranges(self) -> Mapping[str, Range]:
         """Prior of every main parameter, by name with its unit."""
 
-    def mesh(self, ranges: Mapping[str, Range]) -> Mesh:
+    def mesh(self, ranges: Mapping[str, Range], /) -> Mesh:
         """Cells that hold every model within the ranges."""
 
     def draw(

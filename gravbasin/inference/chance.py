@@ -1,9 +1,9 @@
-"""How often this very map offers as good a circle by chance: the statistic repeated at other centres."""
+"""How often this very map offers as good a circle by chance: the same statistic at other centres."""
 
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Iterator
+from collections.abc import Callable
 
 import numpy as np
 import xarray as xr
@@ -11,11 +11,12 @@ from numpy.typing import NDArray
 from scipy import sparse
 
 from gravbasin.discs import ring_fractions
-from gravbasin.inference.likelihood import RingLikelihood, ring_likelihood, shape_scatter
+from gravbasin.inference.evidence import Level
+from gravbasin.inference.likelihood import RingLikelihood, ring_likelihood
 from gravbasin.inference.response import ring_response
 from gravbasin.observed import NoiseModel, polynomial_basis, ring_covariance, simulate_noise, stencil_axes
 
-__all__ = ["Chance", "Stencil", "chance_test", "local_statistic"]
+__all__ = ["Chance", "Stencil", "chance_of", "complete_nodes", "random_ring_means"]
 
 Array = NDArray[np.float64]
 Nodes = tuple[NDArray[np.intp], NDArray[np.intp]]
@@ -32,7 +33,7 @@ class Chance:
     Attributes
     ----------
     statistic : float
-        Amplitude over its standard error at the structure, with the noise level taken from the same rings.
+        Logarithm of the odds of an impact structure against regional noise at the structure.
     centres : int
         Other centres (or random fields) that were tried.
     p_value, standard_error : float
@@ -64,21 +65,21 @@ class Stencil:
         Ring-mean weights on the stencil's own lattice.
     shape : (int, int)
         Nodes of that lattice, northing and easting.
+    area : (n_ring,) array
+        Area of the rings, in cells.
     covariance : (n_ring, n_ring) array, mGal²
         Of the ring means under the noise.
     response : (n_ring, n_radius) array
         From a radial profile to ring means.
-    templates : (n_ring, 1 + n_draw) array, mGal
-        Ring means of the model and of draws of its scatter.
     likelihood : RingLikelihood
-        Under noise and shape scatter.
+        Under the noise.
     """
 
     weights: sparse.csr_array
     shape: tuple[int, int]
+    area: Array
     covariance: Array
     response: Array
-    templates: Array
     likelihood: RingLikelihood
 
     @classmethod
@@ -89,13 +90,9 @@ class Stencil:
         noise: NoiseModel,
         *,
         radius: Array,
-        profiles: Array,
-        resolution: float | None,
+        resolution: float | None = None,
     ) -> Stencil:
-        """Rings with these edges (m) on a lattice of this spacing (m).
-
-        `profiles` (n_radius, 1 + n_draw), mGal, at `radius` (m) are the model and draws of its scatter.
-        """
+        """Rings with these edges (m) on a lattice of this spacing (m), for profiles at `radius` (m)."""
         easting, northing = stencil_axes(edges, spacing)
         share = ring_fractions(easting, northing, edges).T.tocsr()
         area = np.asarray(share.sum(axis=1)).ravel()
@@ -105,9 +102,7 @@ class Stencil:
         east, north = np.meshgrid(easting, northing)
         basis = polynomial_basis(east, north, noise.regional_order, centre=(0.0, 0.0), scale=float(edges[-1]))
         response = ring_response(weights, easting, northing, radius, resolution=resolution)
-        templates = response @ profiles
-        likelihood = ring_likelihood(covariance + shape_scatter(templates, area), weights @ basis)
-        return cls(weights, shape, covariance, response, templates, likelihood)
+        return cls(weights, shape, area, covariance, response, ring_likelihood(covariance, weights @ basis))
 
     @property
     def half(self) -> tuple[int, int]:
@@ -116,6 +111,8 @@ class Stencil:
 
     def ring_means(self, values: Array, rows: NDArray[np.intp], columns: NDArray[np.intp]) -> Array:
         """Ring means about grid nodes, (n_ring, n_centre), mGal; NaN where the stencil meets a node without data."""
+        if rows.size == 0:
+            return np.empty((self.area.size, 0))
         windows = np.lib.stride_tricks.sliding_window_view(values, self.shape)
         blocks = np.array_split(np.arange(rows.size), max(1, rows.size * self.weights.shape[1] // 4_000_000))
         return np.concatenate([self.weights @ self._columns(windows, rows[b], columns[b]) for b in blocks], axis=1)
@@ -125,106 +122,65 @@ class Stencil:
         return np.asarray(picked.reshape(rows.size, -1).T)
 
 
-def local_statistic(likelihood: RingLikelihood, template: Array, data: Array) -> Array:
-    """Amplitude of the template over its standard error, the noise level estimated from the same rings.
-
-    Parameters
-    ----------
-    likelihood : RingLikelihood
-        Covariance known up to its level.
-    template : (n_ring,) array, mGal
-        The model.
-    data : (n_ring, n) array, mGal
-        Ring means about n centres.
-
-    Returns
-    -------
-    (n,) array
-        Student's t with dof - 1 degrees of freedom on Gaussian noise: real crust is not equally rough everywhere, so
-        each place is judged by its own roughness.
-    """
-    t, y = likelihood.whiten(template), likelihood.whiten(data)
-    unit = t / np.sqrt(t @ t)
-    along = unit @ y
-    rest = np.maximum(np.sum(y**2, axis=0) - along**2, 1e-300)
-    return np.asarray(along / np.sqrt(rest / (likelihood.dof - 1)))
-
-
-def chance_test(
-    observed: xr.DataArray,
-    stencil: Stencil,
+def chance_of(
     statistic: float,
+    elsewhere: Array,
     *,
-    centre: tuple[float, float],
-    exclude_radius: float,
     centres: int,
-    noise: NoiseModel,
+    independent: float,
     seed: int,
+    fields: Callable[[int], Array],
 ) -> Chance:
-    """Repeat the statistic at other centres of the same map.
+    """Compare the statistic at the structure with its values elsewhere.
 
     Parameters
     ----------
-    observed : DataArray (northing, easting), mGal
-        The map.
-    stencil : Stencil
-        Rings, likelihood and template.
     statistic : float
-        Its value at the structure, from `local_statistic`.
-    centre : (easting, northing), m
-        The structure, whose surroundings within `exclude_radius` (m) are no chance.
+        At the structure.
+    elsewhere : (n_place,) array
+        At other places of the same map.
     centres : int
-        How many others to try, at most.
-    noise : NoiseModel
-        For random fields where the map is too small.
+        How many of them to use at most, picked at random.
+    independent : float
+        About how many of the places do not overlap.
     seed : int
-        Seed of the choice of centres and of the fields.
+        Of the choice.
+    fields : callable
+        Gives the statistic on that many random fields, for maps with too few other places.
     """
-    rng = np.random.default_rng(seed)
-    rows, columns = _other_centres(observed, stencil, centre, exclude_radius)
-    spacing = (float(observed.northing[1] - observed.northing[0]), float(observed.easting[1] - observed.easting[0]))
-    independent = rows.size * spacing[0] * spacing[1] / (np.pi * exclude_radius**2)
-    if rows.size >= min(ENOUGH_CENTRES, max(centres, 1)):
-        chosen = np.sort(rng.choice(rows.size, min(centres, rows.size), replace=False))
-        data = stencil.ring_means(observed.values, rows[chosen], columns[chosen])
+    if elsewhere.size >= min(ENOUGH_CENTRES, centres):
+        rng = np.random.default_rng([seed, 6])
+        null = elsewhere[np.sort(rng.choice(elsewhere.size, min(centres, elsewhere.size), replace=False))]
         source = "map"
     else:
-        data = np.concatenate(list(_random_ring_means(stencil, spacing, noise, centres, seed)), axis=1)
-        source, independent = "random fields", float(centres)
-    null = local_statistic(stencil.likelihood, stencil.templates[:, 0], data)
-    exceed = int(np.sum(null >= statistic))
-    p = (1 + exceed) / (1 + null.size)
+        null, source, independent = fields(centres), "random fields", float(centres)
+    p = (1 + int(np.sum(null >= statistic))) / (1 + null.size)
     error = float(np.sqrt(p * (1 - p) / max(min(independent, null.size), 1.0)))
-    return Chance(statistic, int(null.size), float(p), error, source, float(independent), null)
+    return Chance(statistic, int(null.size), float(p), error, source, independent, null)
 
 
-def _other_centres(
-    observed: xr.DataArray, stencil: Stencil, centre: tuple[float, float], exclude_radius: float
-) -> Nodes:
-    """Rows and columns of the nodes about which every ring is complete, away from the structure."""
-    half_n, half_e = stencil.half
-    rows, columns = (
-        np.arange(half_n, observed.sizes["northing"] - half_n),
-        np.arange(half_e, observed.sizes["easting"] - half_e),
-    )
-    if rows.size == 0 or columns.size == 0:
-        return np.zeros(0, dtype=int), np.zeros(0, dtype=int)
+def complete_nodes(observed: xr.DataArray, shape: tuple[int, int]) -> Nodes:
+    """Rows and columns of the nodes about which a stencil of this shape lies on the map, free of gaps."""
+    half_n, half_e = shape[0] // 2, shape[1] // 2
+    if observed.sizes["northing"] < shape[0] or observed.sizes["easting"] < shape[1]:
+        return np.zeros(0, dtype=np.intp), np.zeros(0, dtype=np.intp)
     missing = np.cumsum(np.cumsum(np.pad(np.isnan(observed.values).astype(int), ((1, 0), (1, 0))), axis=0), axis=1)
-    n, e = stencil.shape
+    n, e = shape
     gaps = missing[n:, e:] - missing[:-n, e:] - missing[n:, :-e] + missing[:-n, :-e]
-    away = np.hypot(
-        observed.easting.values[columns][None, :] - centre[0], observed.northing.values[rows][:, None] - centre[1]
-    )
-    row, column = np.nonzero((away > exclude_radius) & (gaps == 0))
-    return rows[row], columns[column]
+    row, column = np.nonzero(gaps == 0)
+    return row + half_n, column + half_e
 
 
-def _random_ring_means(
-    stencil: Stencil, spacing: tuple[float, float], noise: NoiseModel, count: int, seed: int, block: int = 200
-) -> Iterator[Array]:
+def random_ring_means(
+    stencil: Stencil, spacing: tuple[float, float], noise: NoiseModel, level: Level, count: int, seed: int
+) -> Array:
+    """Ring means of random fields of the noise, each with its own local level, (n_ring, count), mGal."""
     half_n, half_e = stencil.half
     easting, northing = spacing[1] * np.arange(-half_e, half_e + 1.0), spacing[0] * np.arange(-half_n, half_n + 1.0)
-    for start in range(0, count, block):
-        size = min(block, count - start)
-        fields = simulate_noise(noise, easting, northing, seed=seed + 1 + start, n=size).values.reshape(size, -1)
-        yield np.asarray(stencil.weights @ fields.T)
+    rng = np.random.default_rng([seed, 7])
+    found = np.empty((stencil.area.size, count))
+    for start in range(0, count, 200):
+        size = min(200, count - start)
+        fields = simulate_noise(noise, easting, northing, seed=rng, n=size).values.reshape(size, -1)
+        found[:, start : start + size] = stencil.weights @ fields.T
+    return found * np.sqrt(level.scale * level.dof / rng.chisquare(level.dof, count))

@@ -12,7 +12,17 @@ from scipy import special
 from gravbasin.inference.bank import Bank
 from gravbasin.inference.likelihood import RingLikelihood
 
-__all__ = ["Level", "Posterior", "evidence", "fit_level", "log_likelihood", "weighted_quantile"]
+__all__ = [
+    "Fit",
+    "Level",
+    "Posterior",
+    "evidence",
+    "fit_level",
+    "log_likelihood",
+    "merged",
+    "predictive_fit",
+    "weighted_quantile",
+]
 
 Array = NDArray[np.float64]
 
@@ -141,6 +151,10 @@ class Posterior:
         median, low, high = weighted_quantile(self.bank.parameters[parameter], self.weights, tails)
         return float(median), float(low), float(high)
 
+    def quantiles(self, curves: Array, probabilities: Sequence[float]) -> Array:
+        """Posterior quantiles of curves, (n_point, n_model), point by point: (n_probability, n_point)."""
+        return np.array([weighted_quantile(point, self.weights, probabilities) for point in curves]).T
+
     def correlation(self, first: str, second: str) -> float:
         """Posterior correlation of two parameters: near ±1 they cannot be told apart."""
         table = np.stack([self.bank.parameters[first], self.bank.parameters[second]])
@@ -174,6 +188,37 @@ def evidence(
     size = 1.0 / float(np.sum(weights**2))
     error = float(np.sqrt(max(1.0 / size - 1.0 / weights.size, 0.0)))
     return Posterior(bank.name, float(total - np.log(weights.size)), error, size, weights, bank)
+
+
+@dataclasses.dataclass(frozen=True)
+class Fit:
+    """Agreement of a family with the map.
+
+    Attributes
+    ----------
+    chi2 : float
+        Of its best model.
+    dof : int
+        Rings less the rank of the regional.
+    p_value : float
+        Posterior predictive: how often ring means drawn from the family would lie as far from it.
+    """
+
+    chi2: float
+    dof: int
+    p_value: float
+
+
+def predictive_fit(likelihood: RingLikelihood, templates: Array, data: Array, weights: Array, level: Level) -> Fit:
+    """Whether a family explains the ring means at all, averaged over its posterior.
+
+    With the local level an inverse gamma, chi²/(dof scale) of a true model follows F(dof, level.dof).
+    """
+    from scipy import stats
+
+    chi2 = _chi2(likelihood.whiten(templates), likelihood.whiten(data[:, None]))[0]
+    tail = stats.f.sf(chi2 / (likelihood.dof * level.scale), likelihood.dof, level.dof)
+    return Fit(float(chi2.min()), likelihood.dof, float(weights @ tail))
 
 
 def weighted_quantile(values: Array, weights: Array, probabilities: Sequence[float]) -> Array:

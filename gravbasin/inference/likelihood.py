@@ -6,22 +6,13 @@ import dataclasses
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import linalg, stats
+from scipy import linalg
 
 from gravbasin.errors import CannotFinish
 
-__all__ = ["Misfit", "RingLikelihood", "ring_likelihood", "shape_scatter", "total_scatter"]
+__all__ = ["RingLikelihood", "ring_likelihood", "shape_scatter"]
 
 Array = NDArray[np.float64]
-
-
-@dataclasses.dataclass(frozen=True)
-class Misfit:
-    """Agreement of a model with data: chi-square, degrees of freedom, probability of a misfit at least as large."""
-
-    chi2: float
-    dof: int
-    p_value: float
 
 
 @dataclasses.dataclass(frozen=True, eq=False)
@@ -79,12 +70,6 @@ class RingLikelihood:
             return 0.0, np.inf
         return float(t @ y) / power, power**-0.5
 
-    def misfit(self, model: Array, data: Array) -> Misfit:
-        """Chi-square of data minus model with the regional free, and its p-value."""
-        residual = self.whiten(np.asarray(data) - model)
-        chi2 = float(residual @ residual)
-        return Misfit(chi2, self.dof, float(stats.chi2.sf(chi2, self.dof)))
-
     def fitted_regional(self, residual: Array) -> Array:
         """The regional's part of the ring means, mGal, fitted to data minus model."""
         white_x = linalg.solve_triangular(self.factor, self.regional, lower=True, check_finite=False)
@@ -120,18 +105,6 @@ def ring_likelihood(covariance: Array, regional: Array) -> RingLikelihood:
     kept = size > 1e-6 * size[0]
     log_determinant = float(np.sum(np.log(np.diag(factor))) + np.sum(np.log(size[kept])))
     return RingLikelihood(factor, left[:, kept], regional, log_determinant)
-
-
-def total_scatter(templates: Array) -> Array:
-    """Second moment of drawn templates about the model, mGal²: what size laws and contrasts leave open.
-
-    Parameters
-    ----------
-    templates : (n_ring, 1 + n_draw) array, mGal
-        Ring means of the model, then of draws of its scatter.
-    """
-    spread = templates[:, 1:] - templates[:, :1]
-    return np.asarray(spread @ spread.T / max(spread.shape[1], 1))
 
 
 def shape_scatter(templates: Array, area: Array) -> Array:

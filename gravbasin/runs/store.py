@@ -101,7 +101,8 @@ def write_run(result: Assessment, folder: Path) -> None:
         result.modelled.section.to_netcdf(fresh / "section.nc", engine="h5netcdf")
         result.modelled.grid.to_dataset(name="modelled").to_netcdf(fresh / "anomaly.nc", engine="h5netcdf")
         if result.comparison is not None:
-            result.comparison.maps.to_netcdf(fresh / "map.nc", engine="h5netcdf")
+            maps = result.comparison.maps.assign(log_odds=result.comparison.odds)
+            maps.to_netcdf(fresh / "map.nc", engine="h5netcdf")
         result.profile.to_netcdf(fresh / "profile.nc", engine="h5netcdf")
         (fresh / "scenario.toml").write_text(scenario_toml(result.scenario), encoding="utf-8")
         report, figures = assessment_report(result)
