@@ -4,9 +4,10 @@ import numpy as np
 import pytest
 
 from gravbasin.crater import crater_model, density_section
+from gravbasin.crater.priors import Range
 from gravbasin.errors import CannotFinish
 from gravbasin.forward.rings import ring_anomaly, ring_table
-from gravbasin.inference.bank import Bank, ImpactFamily, Range, build_bank
+from gravbasin.inference.bank import Bank, ImpactFamily, build_bank
 from gravbasin.scenario import Scenario
 
 RADIUS = np.linspace(0.0, 60e3, 40)

@@ -4,8 +4,17 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from gravbasin.inference.bank import Bank, Range
-from gravbasin.inference.evidence import Level, evidence, fit_level, log_likelihood, merged, weighted_quantile
+from gravbasin.crater.priors import Range
+from gravbasin.inference.bank import Bank
+from gravbasin.inference.evidence import (
+    Level,
+    evidence,
+    fit_level,
+    log_likelihood,
+    merged,
+    predictive_fit,
+    weighted_quantile,
+)
 from gravbasin.inference.likelihood import ring_likelihood
 from gravbasin.inference.odds import log_odds
 
@@ -119,3 +128,19 @@ def test_weighted_quantiles_of_equal_weights_are_plain_ones():
     values = np.random.default_rng(8).standard_normal(2001)
     found = weighted_quantile(values, np.full(2001, 1 / 2001), [0.05, 0.5, 0.95])
     np.testing.assert_allclose(found, np.quantile(values, [0.05, 0.5, 0.95]), atol=0.01)
+
+
+def test_predictive_fit_is_uniform_for_true_models_and_small_for_false_ones():
+    """800 maps with their own roughness; Kolmogorov-Smirnov at 0.1 %."""
+    rng = np.random.default_rng(9)
+    level, factor = Level(1.3, 9.0), np.linalg.cholesky(COVARIANCE)
+    likelihood = ring_likelihood(COVARIANCE, np.ones((N, 1)))
+    template, alone = 6.0 * SHAPE[:, None], np.ones(1)
+    p = []
+    for _ in range(800):
+        roughness = np.sqrt(level.scale * level.dof / rng.chisquare(level.dof))
+        data = template[:, 0] + roughness * factor @ rng.standard_normal(N) + 40.0
+        p.append(predictive_fit(likelihood, template, data, alone, level).p_value)
+    assert stats.kstest(p, "uniform").pvalue > 1e-3
+    wrong = 30.0 * np.where(X == 5, 1.0, 0.0)
+    assert predictive_fit(likelihood, template, wrong, alone, level).p_value < 1e-3

@@ -2,10 +2,9 @@
 
 import numpy as np
 import pytest
-from scipy import stats
 
 from gravbasin.errors import CannotFinish
-from gravbasin.inference.likelihood import ring_likelihood, shape_scatter, total_scatter
+from gravbasin.inference.likelihood import ring_likelihood, shape_scatter
 
 
 @pytest.fixture
@@ -44,7 +43,9 @@ def test_matches_the_dense_projector(rng):
     assert amplitude == pytest.approx(t @ m @ y / (t @ m @ t), rel=1e-9)
     assert error == pytest.approx((t @ m @ t) ** -0.5, rel=1e-9)
     np.testing.assert_allclose(likelihood.filter(t), m @ t, atol=1e-10)
-    assert likelihood.misfit(t, y).chi2 == pytest.approx((y - t) @ m @ (y - t), rel=1e-9)
+    assert np.sum(likelihood.whiten(y - t) ** 2) == pytest.approx((y - t) @ m @ (y - t), rel=1e-9)
+    log_det = 0.5 * (np.linalg.slogdet(c)[1] + np.linalg.slogdet(x.T @ ci @ x)[1])
+    assert likelihood.log_determinant == pytest.approx(log_det, rel=1e-9)
 
 
 def test_a_template_within_the_regional_is_invisible():
@@ -72,28 +73,16 @@ def test_any_regional_added_to_the_data_changes_nothing(rng):
     )
 
 
-def test_misfit_p_values_are_uniform_when_the_model_is_true(rng):
-    """1,000 draws; Kolmogorov-Smirnov at 0.1 %: fails once in a thousand seeds."""
-    n = 15
-    c, t = _covariance(n), np.exp(-np.arange(n) / 3.0) * -8.0
-    likelihood = ring_likelihood(c, np.ones((n, 1)))
-    noise = np.linalg.cholesky(c) @ rng.standard_normal((n, 1000))
-    p = [likelihood.misfit(t, t + noise[:, i] + 17.0).p_value for i in range(1000)]
-    assert stats.kstest(p, "uniform").pvalue > 1e-3
-
-
 def test_scatter_of_amplitude_is_no_scatter_of_shape(rng):
     t, area = rng.standard_normal(8), np.linspace(1, 3, 8)
     draws = t[:, None] * rng.uniform(0.5, 2, 40)
     both = np.column_stack([t, draws])
     assert np.abs(shape_scatter(both, area)).max() < 1e-12
-    assert np.trace(total_scatter(both)) > 0.01
 
 
 def test_a_model_without_scatter_adds_nothing():
     alone = np.ones((5, 1))
     assert not shape_scatter(alone, np.ones(5)).any()
-    assert not total_scatter(alone).any()
 
 
 def test_a_singular_covariance_is_refused_in_one_line():
