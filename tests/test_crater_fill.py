@@ -106,3 +106,12 @@ def test_fill_is_frozen_and_its_shape_scales() -> None:
     double = dataclasses.replace(fill, melt_volume=8 * fill.melt_volume, **lengths)
     radius = np.linspace(0, 25e3, 51)
     np.testing.assert_allclose(double.interfaces(2 * radius), 2 * np.array(fill.interfaces(radius)), atol=1e-6)
+
+
+def test_suevite_fills_the_collapsed_disruption_cavity() -> None:
+    """0.49 rim diameters wide (Pilkington & Hildebrand 2003)."""
+    fill = model(24.0, crater={"target_rock": "sedimentary"}).fill
+    radius = np.linspace(0.0, 12e3, 2401)
+    bases = fill.interfaces(radius)
+    held = bases.suevite > bases.hollow + 1e-6
+    assert 2 * radius[held][-1] == pytest.approx(0.49 * 24e3, rel=0.005)

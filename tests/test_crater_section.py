@@ -211,3 +211,30 @@ def test_rebound_bends_units_upwards_and_is_off_by_default() -> None:
     assert mass[0] == pytest.approx(bent.column.moho_contrast * rise[0], rel=0.02)
     assert abs(mass[-1]) < 0.02 * mass[0]
     assert ring_mass(crust, mesh)[0] > 0  # denser rock from below everywhere in the crust
+
+
+def test_risen_crust_is_the_column_at_the_depth_it_came_from() -> None:
+    """Mass per area below the floor against quadrature of rho0(z + u) - rho0(z), cells cut by the floor included."""
+    model = crater_model(scenario(30.0, crater={"target_rock": "mixed", "cover_thickness_km": 1.1}))
+    mesh = default_mesh(model, layers=25, rings=60)
+    mass = ring_mass(part(model, "crustal uplift", mesh), mesh)
+    z = np.linspace(0.0, model.base, 40_001)
+    floor = model.fill.interfaces(mesh.radius).floor
+    risen = model.column.crust_density(z[:, None] + model.displacement.net_rise(z, mesh.radius))
+    contrast_below = np.where(z[:, None] >= floor, risen - model.column.crust_density(z)[:, None], 0.0)
+    expected = np.trapezoid(contrast_below, z, axis=0)
+    np.testing.assert_allclose(mass, expected, atol=0.012 * np.abs(expected).max())
+
+
+def test_rebound_lifts_the_units_too() -> None:
+    history = {"erosion_km": 0.3, "rebound_elastic_thickness_km": 10.0, "eroded_radius_km": 30.0}
+    case = scenario(60.0, history=history, dimensions={"peak_height_km": 0.0})
+    bent = crater_model(case)
+    flat = dataclasses.replace(bent, rebound=None)
+    mesh = default_mesh(bent)
+    lost = ring_mass(part(bent, "sediment in the hollow", mesh) - part(flat, "sediment in the hollow", mesh), mesh)
+    rise = bent.rebound.rise([0.0]) - bent.rebound.rise([bent.outer_radius])
+    assert rise > 50.0
+    # That much less sediment is left in the middle, at its contrast at the base of the hollow.
+    base = bent.fill.interfaces(np.zeros(1)).hollow[0]
+    assert lost[0] == pytest.approx(float(rise[0] * (bent.column.crust_density(base) - 2300.0)), rel=0.02)
