@@ -29,7 +29,6 @@ def scenario(**tables: dict) -> Scenario:
 def test_events_apply_in_order_and_erosion_takes_cover_first(events, stripped, cover, loads) -> None:
     ground = after(events)
     assert (ground.erosion, ground.cover, ground.loads) == (stripped, cover, loads)
-    assert ground.largest_cover == max((c for _, c in loads), default=0)
 
 
 def test_the_net_change_of_the_ground_is_the_sum_of_events() -> None:

@@ -58,11 +58,6 @@ class Ground:
         """Greatest depth below the ground of its day, m, of rock at a depth below the ground before impact."""
         return np.maximum.reduce([depth, *(depth - stripped + cover for stripped, cover in self.loads)])
 
-    @property
-    def largest_cover(self) -> float:
-        """Thickest cover that ever lay on the structure, m."""
-        return max((cover for _, cover in self.loads), default=0.0)
-
 
 def after(events: Iterable[Erosion | Burial], *, cover_density: float = 2400.0) -> Ground:
     """Today's ground after a sequence of episodes; erosion takes cover before rock.

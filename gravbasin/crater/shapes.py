@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from gravbasin.crater.cells import Mesh
 from gravbasin.crater.fill import LITHOLOGIES
 
-__all__ = ["SHAPES", "Shape", "Shell", "shell_contrast"]
+__all__ = ["SHAPES", "Shape", "Shell", "shell_contrast", "subring_radius"]
 
 Array = NDArray[np.float64]
 KM = 1000.0
