@@ -12,9 +12,12 @@ import xarray as xr
 
 from gravbasin import labels
 from gravbasin.crater import PARTS
+from gravbasin.crater.rivals import rivals_of
+from gravbasin.errors import InputError
 from gravbasin.inference.detect import Detectability
 from gravbasin.observed import read_grid
 from gravbasin.runs.compare import Comparison, compare_with_map, detect_without_map, noise_of
+from gravbasin.runs.families import NOISE_ALONE
 from gravbasin.runs.forward_run import Modelled, model_anomaly
 from gravbasin.runs.store import write_run
 from gravbasin.runs.verdict import verdict_of
@@ -90,6 +93,7 @@ def assess(scenario: Scenario, out_dir: str | Path | None = None, *, progress: P
     def stage(name: str) -> None:
         tell(name, STAGES.index(name), len(STAGES))
 
+    _check_odds(scenario)
     stage("reading the map")
     observed = _read(scenario)
     stage("building the section and its anomaly")
@@ -114,7 +118,26 @@ def _read(scenario: Scenario) -> xr.DataArray | None:
     given = scenario.observed
     if given is None:
         return None
-    return read_grid(given.path, variable=given.variable, nan=given.nan, units=given.units)
+    observed = read_grid(given.path, variable=given.variable, nan=given.nan, units=given.units)
+    for axis, centre_km in (("easting", given.centre_easting_km), ("northing", given.centre_northing_km)):
+        low, high = observed[axis].values[[0, -1]] / 1e3
+        if not low <= centre_km <= high:
+            raise InputError(
+                f"observed.centre_{axis}_km",
+                centre_km,
+                f"must lie on the map, {low:g} to {high:g} km",
+                "give the centre of the circle in the map's own coordinates, in kilometres",
+                given.path.name,
+            )
+    return observed
+
+
+def _check_odds(scenario: Scenario) -> None:
+    """Odds for a body that is never weighed would be dropped without a word."""
+    known = [rival.name for rival in rivals_of(scenario)] + [NOISE_ALONE]
+    for name, odds in scenario.prior.odds.items():
+        if name not in known:
+            raise InputError(f"prior.odds.{name}", odds, "names no rival", f"choose from: {', '.join(known)}")
 
 
 def _farthest(scenario: Scenario, observed: xr.DataArray | None) -> float:
