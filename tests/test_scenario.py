@@ -65,8 +65,14 @@ x = 1
     lines = faults(error)
     assert len(lines) == 6
     assert all(line.startswith("case.toml: ") for line in lines)
-    for field, value in [("crater.rim_diametre_km", "30"), ("crater.rim_diameter_km", "900"), ("crater.setting", "swamp"),
-                         ("history.erosion_km", "-2"), ("damage.porosity", "much"), ("fool", "")]:
+    for field, value in [
+        ("crater.rim_diametre_km", "30"),
+        ("crater.rim_diameter_km", "900"),
+        ("crater.setting", "swamp"),
+        ("history.erosion_km", "-2"),
+        ("damage.porosity", "much"),
+        ("fool", ""),
+    ]:
         assert any(f" {field} = {value}" in line for line in lines), field
     assert "did you mean crater.rim_diameter_km?" in str(error.value)
     assert all("; " in line for line in lines)  # a remedy after every rule
@@ -169,7 +175,9 @@ def test_odd_text_survives_the_round_trip(written, tmp_path: Path) -> None:
     assert load_scenario(written(scenario_toml(scenario))) == scenario
 
 
-def test_relative_paths_start_at_the_file_and_overridden_ones_where_the_user_stands(written, monkeypatch, tmp_path) -> None:
+def test_relative_paths_start_at_the_file_and_overridden_ones_where_the_user_stands(
+    written, monkeypatch, tmp_path
+) -> None:
     path = written(WHOLE)
     assert load_scenario(path).observed.path == tmp_path.resolve() / "maps/bouguer.nc"
     elsewhere = tmp_path / "elsewhere"
