@@ -86,7 +86,7 @@ x = 1
         ("[crater]\nrim_diameter_km = 20\ntarget_rock = 'mixed'", "needs crater.cover_thickness_km"),
         ("[crater]\nrim_diameter_km = 20\ncover_thickness_km = 1", "mixed targets only"),
         ("[crater]\nrim_diameter_km = 20\n[history]\nerosion_rate_m_per_myr = 5", "needs crater.age_myr"),
-        ("[crater]\nrim_diameter_km = 20\nage_myr = 9\n[history]\nerosion_rate_m_per_myr = 5\nerosion_km = 1", "exclude"),
+        ("[crater]\nrim_diameter_km = 20\nage_myr = 9\n[history]\nerosion_rate_m_per_myr = 5\nerosion_km = 1", "excl"),
         ("[crater]\nrim_diameter_km = 20\n[history]\nevents = [{bury_km = 1}]\nburial_km = 2", "events replace"),
         ("[crater]\nrim_diameter_km = 20\n[history]\nevents = [{bury_km = 1, erode_km = 1}]", "exactly one"),
         ("[crater]\nrim_diameter_km = 20\n[background]\nlayers = [{top_km = 1, density_kg_m3 = 2700}]", "start at 0"),
