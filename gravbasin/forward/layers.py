@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import warnings
 from dataclasses import dataclass
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import xarray as xr
@@ -15,16 +15,28 @@ from gravbasin.discs import ring_fractions
 from gravbasin.errors import GravbasinWarning, InputError
 from gravbasin.forward.convolution import EvenConvolution
 from gravbasin.forward.cost import MEMORY_LIMIT_GIB, GridCost, refuse_above
+from gravbasin.forward.deformation import deformed_cells
+from gravbasin.forward.motion import (
+    NEGLIGIBLE,
+    Motion,
+    is_axisymmetric,
+    layer_edges,
+    motion_of,
+    reach,
+    warn_of_missing_rock,
+)
 from gravbasin.forward.rectangles import rectangle_potentials
 from gravbasin.forward.result import anomaly_array
 from gravbasin.forward.sections import RingCells, ascending, ring_cells
 from gravbasin.labels import coordinate, data_array, provenance, read_provenance, versions
 
+if TYPE_CHECKING:
+    from gravbasin.scenario import Deformation
+
 __all__ = ["PrismLayers", "grid_anomaly", "layered_prisms", "prism_layers"]
 
 Array = NDArray[np.float64]
 
-_NEGLIGIBLE = 0.005  # of the peak contrast: below this the rim of a model, or what a grid cuts off, is not worth a word
 _SMALLEST_CELL = 1.0  # metres; anything smaller is a grid in degrees
 
 
@@ -34,6 +46,7 @@ def layered_prisms(
     northing_m: Any,
     *,
     centre: tuple[float, float] = (0.0, 0.0),
+    deformation: Deformation | None = None,
     memory_limit_gib: float = MEMORY_LIMIT_GIB,
 ) -> xr.Dataset:
     """Prisms on a map grid with the section's mass in every cell.
@@ -46,6 +59,9 @@ def layered_prisms(
         Cell centres, ascending and evenly spaced.
     centre : (float, float), m
         Easting and northing of the section's axis.
+    deformation : Deformation, optional
+        Tilt, stretch, uneven erosion, missing sector and one-sided cover of a scenario; see
+        `gravbasin.forward.deformation` for what each does. None, or one that does nothing, changes no bit.
     memory_limit_gib : float
         Refuse rather than hold more than this.
 
@@ -53,7 +69,8 @@ def layered_prisms(
     -------
     Dataset
         ``density_contrast`` (layer, northing, easting), kg/m³, with ``depth_edges``. A cell that rings share gets
-        their mean, weighted by the exact areas of ring and cell, so mass is kept.
+        their mean, weighted by the exact areas of ring and cell, so mass is kept. Deformed sections have layers added
+        where contrast sank below their base, and no contrast above today's ground.
 
     Raises
     ------
@@ -65,7 +82,8 @@ def layered_prisms(
     Warns
     -----
     GravbasinWarning
-        The section ends before its contrast has died out, or the grid ends before the section does.
+        The section ends before its contrast has died out, the grid ends before the section does, or a deformation
+        brings in rock from above the section.
 
     Examples
     --------
@@ -79,15 +97,21 @@ def layered_prisms(
     True
     """
     cells = ring_cells(section, "layered_prisms")
+    motion = _motion(cells, deformation)
+    depth_edges = cells.depth_edges if motion is None else layer_edges(cells, motion)
     easting = _even_axis("easting_m", easting_m, "layered_prisms")
     northing = _even_axis("northing_m", northing_m, "layered_prisms")
-    shape = (cells.depth_edges.size - 1, northing.size, easting.size)
+    shape = (depth_edges.size - 1, northing.size, easting.size)
     refuse_above(GridCost(*shape).prism_bytes, memory_limit_gib, "layered_prisms")
-    _warn_of_edges(cells, easting - centre[0], northing - centre[1])
-    share = ring_fractions(easting - centre[0], northing - centre[1], cells.radius_edges)
-    density = np.empty(shape)
-    for layer, row in zip(density, cells.contrast, strict=True):
-        layer[...] = (share @ row).reshape(shape[1:])
+    local = easting - centre[0], northing - centre[1]
+    _warn_of_edges(cells, motion, *local)
+    if motion is not None:
+        density = deformed_cells(cells, motion, *local, depth_edges).reshape(shape)
+    else:
+        density = np.empty(shape)
+        share = ring_fractions(*local, cells.radius_edges)
+        for layer, row in zip(density, cells.contrast, strict=True):
+            layer[...] = (share @ row).reshape(shape[1:])
     contrast = data_array(
         density,
         ("layer", "northing", "easting"),
@@ -96,8 +120,10 @@ def layered_prisms(
         units="kg m-3",
         long_name="density contrast of the prism",
     )
-    edges = coordinate("depth_edges", cells.depth_edges)
+    edges = coordinate("depth_edges", depth_edges)
     facts = {"centre_m": list(centre), "section": read_provenance(section), "versions": versions("numpy")}
+    if motion is not None and deformation is not None:
+        facts["deformation"] = deformation.model_dump()
     return contrast.to_dataset().assign_coords(depth_edges=edges).assign_attrs(provenance=provenance(**facts))
 
 
@@ -123,10 +149,17 @@ def _even_axis(name: str, values: Any, where: str) -> Array:
     return axis
 
 
-def _warn_of_edges(cells: RingCells, easting: Array, northing: Array) -> None:
+def _motion(cells: RingCells, deformation: Deformation | None) -> Motion | None:
+    """What has to be done beyond placing rings; an undeformed section may still reach above the ground."""
+    if deformation is None or (is_axisymmetric(deformation) and cells.depth_edges[0] >= 0.0):
+        return None
+    return motion_of(deformation)
+
+
+def _warn_of_edges(cells: RingCells, motion: Motion | None, easting: Array, northing: Array) -> None:
     """Say where a model or a grid ends too early; `easting` and `northing` are relative to the axis."""
     strength = np.abs(cells.contrast).max(axis=0)
-    filled = np.flatnonzero(strength > _NEGLIGIBLE * cells.peak)
+    filled = np.flatnonzero(strength > NEGLIGIBLE * cells.peak)
     if filled.size == 0:
         return
     if filled[-1] == strength.size - 1:
@@ -136,12 +169,18 @@ def _warn_of_edges(cells: RingCells, easting: Array, northing: Array) -> None:
             GravbasinWarning,
             stacklevel=3,
         )
-    reach = min(side for axis in (easting, northing) for side in _sides(axis))
-    outer = cells.radius_edges[filled[-1] + 1]
-    if reach < outer:
+    outer = np.full(4, cells.radius_edges[filled[-1] + 1])
+    if motion is not None:
+        warn_of_missing_rock(cells, motion, stacklevel=4)
+        least, greatest = reach(cells, motion, NEGLIGIBLE * cells.peak)
+        outer = np.array([-least[0], greatest[0], -least[1], greatest[1]])
+    sides = np.array([*_sides(easting), *_sides(northing)])
+    worst = int(np.argmax(outer - sides))
+    if sides[worst] < outer[worst]:
         warnings.warn(
-            f"the grid reaches {reach / 1e3:g} km from the centre but the section has contrast out to "
-            f"{outer / 1e3:g} km: what lies outside the grid is missing; widen the grid or pad it and crop the result",
+            f"the grid reaches {sides[worst] / 1e3:g} km from the centre but the section has contrast out to "
+            f"{outer[worst] / 1e3:g} km: what lies outside the grid is missing; widen the grid or pad it and crop "
+            "the result",
             GravbasinWarning,
             stacklevel=3,
         )
