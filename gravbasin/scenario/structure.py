@@ -1,31 +1,31 @@
-"""The scenario file as frozen models: every field with its unit, bounds, default and one sentence.
-
-Kilometres in the file, the unit in every name; conversion to SI happens once, at the doors of `crater` and `observed`.
-"""
+"""Tables that describe the structure: what was hit, how big, what broke, what happened since."""
 
 from __future__ import annotations
 
 from itertools import pairwise
 from pathlib import Path
-from typing import Annotated, Literal
+from typing import Literal
 
-from pydantic import BaseModel, ConfigDict, Field, model_validator
+from pydantic import Field, model_validator
 
-__all__ = ["Scenario"]
+from gravbasin.scenario.base import Azimuth, Contrast, Density, NotNegative, Positive, Table
 
-Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
-NotNegative = Annotated[float, Field(ge=0, allow_inf_nan=False)]
-Density = Annotated[float, Field(gt=0, le=6000, allow_inf_nan=False)]
-Contrast = Annotated[float, Field(ge=-2000, le=2000, allow_inf_nan=False)]
-Azimuth = Annotated[float, Field(ge=0, le=360)]
-Probability = Annotated[float, Field(gt=0, lt=1)]
+__all__ = [
+    "Background",
+    "Crater",
+    "Damage",
+    "Deformation",
+    "Dimensions",
+    "Event",
+    "Fill",
+    "History",
+    "Layer",
+    "RivalBody",
+    "Samples",
+]
 
 
-class _Table(BaseModel):
-    model_config = ConfigDict(frozen=True, extra="forbid", str_strip_whitespace=True)
-
-
-class Crater(_Table):
+class Crater(Table):
     """The structure as it was when fresh."""
 
     rim_diameter_km: float = Field(gt=2, le=300, description="final rim-to-rim diameter before erosion, km")
@@ -49,7 +49,7 @@ class Crater(_Table):
     melt_coefficient: float = Field(2e-4, ge=1e-6, le=1e-3, description="c of melt volume = c Dtc^3.85, km³")
 
 
-class Dimensions(_Table):
+class Dimensions(Table):
     """Measured or assumed dimensions; a value given here wins over its size law."""
 
     transient_diameter_km: Positive | None = Field(None, description="diameter of the transient cavity, km")
@@ -68,7 +68,7 @@ class Dimensions(_Table):
     moho_uplift_km: NotNegative | None = Field(None, description="rise of the Moho below the centre, km")
 
 
-class Layer(_Table):
+class Layer(Table):
     """One layer of the density column before impact."""
 
     top_km: NotNegative = Field(description="top of the layer below the ground before impact, km")
@@ -77,7 +77,7 @@ class Layer(_Table):
     porosity: float = Field(0.0, ge=0, le=0.7, description="porosity before impact, 0-1; porous rock opens less")
 
 
-class Background(_Table):
+class Background(Table):
     """The density column of the target before impact: crustal layers, Moho, mantle."""
 
     layers: tuple[Layer, ...] = Field(
@@ -105,7 +105,7 @@ class Background(_Table):
         return self
 
 
-class Damage(_Table):
+class Damage(Table):
     """Porosity of the fractured floor and what has closed it since."""
 
     form: Literal["exponential", "hyperbolic", "pressure"] = Field(
@@ -135,7 +135,7 @@ class Damage(_Table):
     )
 
 
-class Fill(_Table):
+class Fill(Table):
     """Rocks within the crater: breccia, melt, and what filled the hollow later."""
 
     breccia_contrast_kg_m3: Contrast = Field(-270.0, description="breccia minus intact target, kg/m³")
@@ -158,7 +158,7 @@ class Fill(_Table):
     )
 
 
-class Event(_Table):
+class Event(Table):
     """One episode after the impact: rock removed or laid down."""
 
     erode_km: NotNegative | None = Field(None, description="thickness removed, km")
@@ -171,7 +171,7 @@ class Event(_Table):
         return self
 
 
-class History(_Table):
+class History(Table):
     """What happened after the impact: erosion, burial, or a list of both in order."""
 
     erosion_km: NotNegative | None = Field(None, description="rock stripped below the ground before impact, km")
@@ -195,7 +195,7 @@ class History(_Table):
         return self
 
 
-class Deformation(_Table):
+class Deformation(Table):
     """What bent, cut or half buried the structure after it formed; nothing by default.
 
     Azimuths run clockwise from north. Stretch comes first, then uneven erosion, then tilt, all about the centre at
@@ -239,7 +239,7 @@ class Deformation(_Table):
         return self
 
 
-class Samples(_Table):
+class Samples(Table):
     """Laboratory samples that narrow the target's density and the porosity of its fractures."""
 
     path: Path = Field(description="CSV table of densities, porosities, velocities, positions, minerals")
@@ -248,7 +248,7 @@ class Samples(_Table):
     outlier_scores: Positive = Field(3.5, description="robust standard scores beyond which a sample is set aside")
 
 
-class RivalBody(_Table):
+class RivalBody(Table):
     """A body other than an impact structure that could make the anomaly; it joins the rivals known already."""
 
     name: str = Field(min_length=1, description="name shown in tables; that of a known rival replaces it")
@@ -264,127 +264,4 @@ class RivalBody(_Table):
         for name, (low, high) in self.ranges.items():
             if not (low < high and abs(low) < float("inf") and abs(high) < float("inf")):
                 raise ValueError(f"range of {name} must ascend, not {[low, high]}; give [least, largest]")
-        return self
-
-
-class Observed(_Table):
-    """The map under test."""
-
-    path: Path = Field(description="grid file: netCDF, CSV x,y,value, or GeoTIFF")
-    variable: str | None = Field(None, description="netCDF variable, when the file holds several")
-    units: str | None = Field(None, description="units of the values, when the file does not say")
-    nan: Literal["refuse", "skip"] = Field("refuse", description="what to do with empty nodes")
-    centre_easting_km: float = Field(0.0, description="easting of the structure's centre in the map's coordinates, km")
-    centre_northing_km: float = Field(0.0, description="northing of the centre, km")
-    resolution_km: Positive | None = Field(
-        None,
-        description="half the shortest wavelength the map holds, km, where it is smoother than its grid: the model is "
-        "smoothed alike; left out, the model is not smoothed and noise rests on nodes two steps apart",
-    )
-
-
-class Noise(_Table):
-    """Geological noise: estimated from the map unless every value of a stated model is given."""
-
-    sill_mgal: Positive | None = Field(None, description="standard deviation of the correlated part, mGal")
-    range_km: Positive | None = Field(None, description="correlation range L of the Matérn model, km")
-    smoothness: float | None = Field(None, ge=0.1, le=5, description="smoothness nu of the Matérn model")
-    nugget_mgal: NotNegative | None = Field(None, description="standard deviation of the uncorrelated part, mGal")
-    regional_order: Literal[0, 1, 2] = Field(1, description="order of the polynomial regional")
-
-    @model_validator(mode="after")
-    def _whole(self) -> Noise:
-        given = [self.sill_mgal, self.range_km, self.smoothness, self.nugget_mgal]
-        if any(v is None for v in given) and any(v is not None for v in given):
-            raise ValueError("a stated noise needs sill_mgal, range_km, smoothness and nugget_mgal together; give all")
-        return self
-
-    @property
-    def stated(self) -> bool:
-        """Whether the scenario states the noise instead of leaving it to the map."""
-        return self.sill_mgal is not None
-
-
-class Model(_Table):
-    """Resolution of the model; the defaults pass the audit for complex craters."""
-
-    layers: int = Field(80, ge=20, le=400, description="layers of the section")
-    rings: int = Field(160, ge=40, le=800, description="rings of the section")
-    grid_step_km: Positive | None = Field(None, description="step of the modelled grid; by default 1/80 of the diameter")
-    station_height_m: float = Field(1.0, ge=0.0, le=10000, description="height of the stations above today's ground, m")
-    draws: int = Field(200, ge=20, le=20000, description="draws of the size-law scatter behind every band")
-    scatter: bool = Field(True, description="let size laws and contrasts vary by their published scatter in the draws")
-
-
-class Prior(_Table):
-    """What is thought possible before the map is looked at."""
-
-    rim_diameter_km: tuple[Positive, Positive] | None = Field(
-        None, description="least and largest rim diameter, km; by default 0.6 and 1.6 times crater.rim_diameter_km"
-    )
-    erosion_km: tuple[NotNegative, NotNegative] | None = Field(
-        None, description="least and largest erosion, km; by default 0 and twice the scenario's plus 2 km"
-    )
-    models: int = Field(3000, ge=200, le=200000, description="models drawn for each kind of body")
-    odds: dict[str, Positive] = Field(
-        default_factory=dict, description="prior odds of a rival against an impact by its name; 1 where not given"
-    )
-
-    @model_validator(mode="after")
-    def _ascending(self) -> Prior:
-        for name in ("rim_diameter_km", "erosion_km"):
-            bounds = getattr(self, name)
-            if bounds is not None and bounds[1] <= bounds[0]:
-                raise ValueError(f"{name} must ascend, not {list(bounds)}; give [least, largest]")
-        return self
-
-
-class Inference(_Table):
-    """Thresholds of the verdict and effort of the random parts."""
-
-    false_alarm_probability: Probability = Field(0.001, description="accepted probability of a false alarm")
-    detection_probability: Probability = Field(0.5, description="least probability of detection to call it visible")
-    consistent_p_value: Probability = Field(0.05, description="a misfit less probable than this is inconsistent")
-    chance_p_value: Probability = Field(0.05, description="share of other places below which a circle stands out")
-    separation: float = Field(
-        6.0, ge=0, description="twice the log evidence by which an impact must lead every rival to be separable"
-    )
-    outer_radius_in_diameters: float = Field(1.5, ge=0.75, le=4, description="radius of the tested disc, diameters")
-    station_spacing_km: Positive = Field(5.0, description="station spacing assumed where there is no map, km")
-    chance_centres: int = Field(1000, ge=0, le=100000, description="other centres tried on the map")
-    noise_points: int = Field(700, ge=100, le=4000, description="map nodes used to estimate the noise")
-    noise_draws: int = Field(24, ge=0, le=1000, description="plausible noise models behind the detectability band")
-
-
-class Scenario(_Table):
-    """One question to gravbasin: a structure, its history, a map, thresholds."""
-
-    name: str = Field("unnamed structure", min_length=1, description="name shown in the report")
-    note: str = Field("", description="a sentence for the report's head")
-    seed: int = Field(1, ge=0, description="seed of everything random")
-    crater: Crater
-    dimensions: Dimensions = Dimensions()
-    background: Background = Background()
-    damage: Damage = Damage()
-    fill: Fill = Fill()
-    history: History = History()
-    deformation: Deformation = Deformation()
-    samples: Samples | None = None
-    rivals: tuple[RivalBody, ...] = ()
-    observed: Observed | None = None
-    noise: Noise = Noise()
-    model: Model = Model()
-    prior: Prior = Prior()
-    inference: Inference = Inference()
-
-    @model_validator(mode="after")
-    def _together(self) -> Scenario:
-        if self.history.erosion_rate_m_per_myr and self.crater.age_myr is None:
-            raise ValueError("history.erosion_rate_m_per_myr needs crater.age_myr; give the age or erosion_km")
-        if self.crater.target_rock == "mixed" and self.crater.cover_thickness_km == 0:
-            raise ValueError("crater.target_rock = 'mixed' needs crater.cover_thickness_km greater than 0; give it")
-        if self.crater.target_rock != "mixed" and self.crater.cover_thickness_km > 0:
-            raise ValueError("crater.cover_thickness_km applies to mixed targets only; set target_rock = 'mixed'")
-        if self.crater.cover_thickness_km >= self.background.moho_km:
-            raise ValueError("crater.cover_thickness_km must be less than background.moho_km; give a thinner cover")
         return self
