@@ -93,9 +93,14 @@ def disc_area(sides: Array, radius: Array) -> Array:
         length = np.maximum(_dot(along, along), 1e-300)
         middle = -_dot(start, along) / length
         half = np.sqrt(np.maximum(middle**2 - (_dot(start, start) - radius**2) / length, 0.0))
-        enter, leave = (start + np.clip(t, 0.0, 1.0) * along for t in (middle - half, middle + half))
+        enter, leave = (_point(start, end, t) for t in (middle - half, middle + half))
         total += 0.5 * _cross(enter, leave) + 0.5 * radius**2 * (_angle(start, enter) + _angle(leave, end))
     return total
+
+
+def _point(start: Array, end: Array, t: Array) -> Array:
+    """Along a side, or its very ends beyond them: rounding there would turn a corner about the origin."""
+    return np.where(t >= 1.0, end, np.where(t <= 0.0, start, start + t * (end - start)))
 
 
 def _dot(a: Array, b: Array) -> Array:

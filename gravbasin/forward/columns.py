@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator
 from dataclasses import dataclass
 from itertools import pairwise
@@ -30,13 +31,19 @@ class ColumnTable:
     ----------
     totals : (n_radius * (n_depth + 1),) array, kg/m²
         Contrast from the section's top down to each depth edge, distance slow; 0 at the last distance and beyond.
-    radius_step : float, m
+    width : float, m
+        Width of the columns; the distances are 16 to a width.
     depth_edges : (n_depth + 1,) array, m
     """
 
     totals: Array
-    radius_step: float
+    width: float
     depth_edges: Array
+
+    @property
+    def radius_step(self) -> float:
+        """Step of the distances, m."""
+        return self.width / _STEPS
 
     @classmethod
     def of(cls, cells: RingCells, width: float) -> ColumnTable:
@@ -48,7 +55,7 @@ class ColumnTable:
         mass = np.cumsum(cells.contrast * np.diff(cells.depth_edges)[:, None], axis=0)
         mass = np.pad(np.cumsum(mass * np.diff(squares), axis=1), ((1, 0), (1, 0)))
         totals = np.array([np.interp(outer, squares, row) - np.interp(inner, squares, row) for row in mass])
-        return cls(np.ascontiguousarray((totals / (outer - inner)).T).ravel(), step, cells.depth_edges)
+        return cls(np.ascontiguousarray((totals / (outer - inner)).T).ravel(), width, cells.depth_edges)
 
     def means(self, points: Array, depth_edges: Array, motion: Array) -> Iterator[Array]:
         """Mean contrast of every column in one layer after the other.
@@ -68,23 +75,28 @@ class ColumnTable:
 
         Notes
         -----
-        Along the column the section's layers are met exactly; its rings are read where the column is halfway down
-        the layer.
+        Along the column the section's layers are met exactly; its rings are read halfway down the layer, or down each
+        of several parts of it where the column drifts sideways by more than its width.
         """
-        count = self.depth_edges.size
         horizontal, slope = motion[:2, :2] @ points, motion[2, :2] @ points
         upper = self._place(slope + motion[2, 2] * depth_edges[0])
         for top, bottom in pairwise(depth_edges):
-            if bottom == top:
-                yield np.zeros(slope.size)
-                continue
-            lower = self._place(slope + motion[2, 2] * bottom)
-            drift = 0.5 * (top + bottom) * motion[:2, 2]
-            distance = np.hypot(horizontal[0] + drift[0], horizontal[1] + drift[1])
-            row = np.minimum(distance * (1.0 / self.radius_step) + 0.5, self.totals.size // count - 1).astype(np.intp)
-            row *= count
-            yield (self._total(row, *lower) - self._total(row, *upper)) * (1.0 / (motion[2, 2] * (bottom - top)))
-            upper = lower
+            total = np.zeros(slope.size)
+            drift = float(np.hypot(*motion[:2, 2])) * (bottom - top)
+            for start, end in pairwise(np.linspace(top, bottom, math.ceil(drift / self.width) + 1 if drift else 2)):
+                if bottom > top:
+                    lower = self._place(slope + motion[2, 2] * end)
+                    row = self._row(horizontal + (0.5 * (start + end) * motion[:2, 2])[:, None])
+                    total += self._total(row, *lower) - self._total(row, *upper)
+                    upper = lower
+            yield total * (1.0 / (motion[2, 2] * (bottom - top))) if bottom > top else total
+
+    def _row(self, points: Array) -> NDArray[np.intp]:
+        """Where the totals at the nearest distance begin."""
+        count, last = self.depth_edges.size, self.totals.size // self.depth_edges.size - 1
+        row = np.minimum(np.hypot(*points) * (1.0 / self.radius_step) + 0.5, last).astype(np.intp)
+        row *= count
+        return row
 
     def _place(self, depth: Array) -> tuple[NDArray[np.intp], Array]:
         """Index of the section's layer at a depth, and how far down in it; clamped to the section."""

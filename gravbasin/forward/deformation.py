@@ -55,7 +55,8 @@ __all__ = ["azimuthal_mean", "deformed_cells"]
 Array = NDArray[np.float64]
 
 _COLUMNS = 3  # columns across a cell, each way
-_AZIMUTHS = 48  # directions in which the azimuthal mean looks from each column; neighbours are staggered
+_AZIMUTHS = 64  # points around each circle of the azimuthal mean
+_GOLDEN = 0.618033988749895  # staggers neighbouring circles, so that no direction is preferred
 
 
 def deformed_cells(cells: RingCells, motion: Motion, easting: Array, northing: Array, edges: Array) -> Array:
@@ -76,8 +77,10 @@ def deformed_cells(cells: RingCells, motion: Motion, easting: Array, northing: A
 
     Notes
     -----
-    Stretch, missing sector and cover leave layers level, and cells share areas with moved rings in closed form. Tilt
-    and uneven erosion do not: there each cell is the mean of 3 × 3 columns.
+    Stretch, missing sector and cover leave layers level, and cells share areas with moved rings in closed form: mass is
+    kept to rounding. Tilt and uneven erosion do not: there each cell is the mean of 3 × 3 columns. Measured against
+    9 × 9 on 160 cells across a structure and its surroundings, tilted by 0 to 10°, that costs 0.02 to 0.05 % of the
+    peak anomaly at worst and 0.002 % in the mean; with 40 cells across, 0.15 % at worst. Mass is kept to 0.03 %.
     """
     half = 0.5 * (easting[1] - easting[0]), 0.5 * (northing[1] - northing[0])
     points = np.array([a.ravel() for a in np.meshgrid(easting, northing)])
@@ -231,11 +234,12 @@ def _ring_means(cells: RingCells, motion: Motion, edges: Array, rings: Array) ->
     step = 2.0 * math.pi / _AZIMUTHS
     for part in range(_COLUMNS):
         inner, outer = (rings[:-1] + (part + at) / _COLUMNS * np.diff(rings) for at in (0, 1))
-        azimuth = np.asarray(step * (np.arange(float(_AZIMUTHS)) + (part + 0.5) / _COLUMNS))
+        stagger = _GOLDEN * (_COLUMNS * np.arange(rings.size - 1.0) + part) % 1.0
+        azimuth = np.asarray(step * (np.arange(float(_AZIMUTHS))[:, None] + stagger))
         ring_weight = (outer**2 - inner**2) / np.diff(rings**2)
-        weight = (_kept(motion, azimuth, step)[:, None] * ring_weight).ravel() / _AZIMUTHS
+        weight = (_kept(motion, azimuth, step) * ring_weight).ravel() / _AZIMUTHS
         radius = 0.5 * (inner + outer)
-        points = np.array([np.outer(np.sin(azimuth), radius).ravel(), np.outer(np.cos(azimuth), radius).ravel()])
+        points = np.array([(np.sin(azimuth) * radius).ravel(), (np.cos(azimuth) * radius).ravel()])
         beyond = np.zeros(weight.size, dtype=bool)
         if motion.covered is not None:
             beyond = np.asarray(np.array(motion.covered[0]) @ points >= motion.covered[1])
