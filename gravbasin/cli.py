@@ -69,7 +69,8 @@ def _scenario_options(default_folder: str) -> Callable[[F], F]:
 
 @cli.command(epilog="Example: gravbasin assess configs/demo.toml -o demo_run --set history.erosion_km=1.5")
 @_scenario_options("_run")
-def assess(scenario: Path, out: Path | None, changes: tuple[str, ...], quiet: bool) -> None:
+@click.option("--search", is_flag=True, help="Also rank circular candidates over the whole map.")
+def assess(scenario: Path, out: Path | None, changes: tuple[str, ...], quiet: bool, search: bool) -> None:
     """Test a scenario against its map and write a run folder with verdict and report."""
     from gravbasin.runs.assess import assess as run
     from gravbasin.scenario_file import load_scenario, parse_override
@@ -77,7 +78,7 @@ def assess(scenario: Path, out: Path | None, changes: tuple[str, ...], quiet: bo
     question = load_scenario(scenario, dict(parse_override(text) for text in changes))
     folder = out or Path(f"{scenario.stem}_run")
     with _told(quiet) as progress:
-        result = run(question, folder, progress=progress)
+        result = run(question, folder, search=search, progress=progress)
     if quiet:
         return
     verdict = result.verdict
@@ -106,6 +107,11 @@ def _numbers(verdict: dict[str, Any]) -> Iterator[str]:
         yield (
             f"chance      p = {chance['p_value']:.3g} ± {chance['standard_error']:.2g} "
             f"from {chance['centres']} other places ({chance['source']})"
+        )
+    for place in verdict.get("search", []):
+        yield (
+            f"candidate {place['rank']:<2} easting {place['easting_km']:.1f} km, "
+            f"northing {place['northing_km']:.1f} km, log odds {place['log_odds']:+.1f}, search-wide p {place['search_p_value']:.2f}"
         )
     audit = verdict["audit"]
     yield f"audit       {audit['max_abs_difference_mgal']:.1e} mGal from {audit['reference']}"

@@ -154,7 +154,7 @@ def test_gaps_are_refused_then_skipped_on_request(place):
 
 
 def test_a_centre_off_the_map_is_told_in_one_line(place):
-    with pytest.raises(gb.InputError, match="centre_easting_km = 9000.0: must lie on the map"):
+    with pytest.raises(gb.InputError, match=r"centre_easting_km = 9000\.0: must lie on the map"):
         gb.assess(_scenario(place, place / "map.nc", **{"observed.centre_easting_km": 9000.0}))
 
 

@@ -13,12 +13,14 @@ import xarray as xr
 from gravbasin import labels
 from gravbasin.crater import PARTS
 from gravbasin.crater.rivals import rivals_of
+from gravbasin.crater.samples import with_samples
 from gravbasin.errors import InputError
 from gravbasin.inference.detect import Detectability
 from gravbasin.observed import read_grid
 from gravbasin.runs.compare import Comparison, compare_with_map, detect_without_map, noise_of
 from gravbasin.runs.families import NOISE_ALONE
 from gravbasin.runs.forward_run import Modelled, model_anomaly
+from gravbasin.runs.search import Candidate, candidate_table, search_map
 from gravbasin.runs.store import write_run
 from gravbasin.runs.verdict import verdict_of
 from gravbasin.scenario import Scenario
@@ -33,6 +35,7 @@ STAGES = (
     "drawing impact structures",
     "searching the map for chance circles",
     "weighing rivals",
+    "charging for the search",
     "writing",
 )
 
@@ -51,6 +54,8 @@ class Assessment:
         From the map, or on a stated survey where there is no map.
     comparison : Comparison or None
         None where the scenario has no observed map.
+    candidates : tuple of Candidate
+        Circular candidates over the whole map, best first; empty unless searched for.
     verdict : dict
         See DEVELOPERS.md for the fields.
     profile : Dataset
@@ -61,11 +66,18 @@ class Assessment:
     modelled: Modelled
     noise_detectability: Detectability
     comparison: Comparison | None
+    candidates: tuple[Candidate, ...]
     verdict: dict[str, Any]
     profile: xr.Dataset
 
 
-def assess(scenario: Scenario, out_dir: str | Path | None = None, *, progress: Progress | None = None) -> Assessment:
+def assess(
+    scenario: Scenario,
+    out_dir: str | Path | None = None,
+    *,
+    search: bool = False,
+    progress: Progress | None = None,
+) -> Assessment:
     """Answer a scenario, and write the run folder when `out_dir` is given.
 
     Parameters
@@ -74,6 +86,8 @@ def assess(scenario: Scenario, out_dir: str | Path | None = None, *, progress: P
         From `load_scenario`.
     out_dir : path, optional
         Run folder to write; replaced as a whole, or left as it was.
+    search : bool
+        Also rank circular candidates over the whole map.
     progress : callable, optional
         Called with (stage, number, count) as the work goes on.
 
@@ -94,6 +108,10 @@ def assess(scenario: Scenario, out_dir: str | Path | None = None, *, progress: P
         tell(name, STAGES.index(name), len(STAGES))
 
     _check_odds(scenario)
+    if search and scenario.observed is None:
+        raise InputError("--search", "(no map)", "needs an observed map", "give observed.path")
+    if scenario.samples is not None:
+        scenario = with_samples(scenario)[0]
     stage("reading the map")
     observed = _read(scenario)
     stage("building the section and its anomaly")
@@ -106,8 +124,17 @@ def assess(scenario: Scenario, out_dir: str | Path | None = None, *, progress: P
     else:
         comparison = compare_with_map(scenario, modelled, observed, noise, progress=stage)
         seen = comparison.detectability
+    candidates: list[Candidate] = []
+    if search and observed is not None and comparison is not None:
+        stage("charging for the search")
+        diameter = 1e3 * scenario.crater.rim_diameter_km
+        candidates = search_map(observed, comparison.places, noise, diameter=diameter, seed=scenario.seed)
     verdict = verdict_of(scenario, modelled, noise.as_dict(), seen, comparison, observed)
-    result = Assessment(scenario, modelled, seen, comparison, verdict, _profile(modelled, comparison))
+    if search:
+        verdict["search"] = candidate_table(candidates).to_dict("records")
+    result = Assessment(
+        scenario, modelled, seen, comparison, tuple(candidates), verdict, _profile(modelled, comparison)
+    )
     if out_dir is not None:
         stage("writing")
         write_run(result, Path(out_dir))

@@ -9,15 +9,12 @@ import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
 
-from gravbasin import labels
 from gravbasin.errors import InputError
-from gravbasin.inference.bank import Bank
-from gravbasin.inference.chance import Chance, Stencil, chance_of, complete_nodes, random_ring_means
-from gravbasin.inference.circularity import Circularity, Harmonics, circularity_test
+from gravbasin.inference.chance import Chance, Stencil
+from gravbasin.inference.circularity import Circularity
 from gravbasin.inference.detect import Detectability, detectability, signal_band
-from gravbasin.inference.evidence import Fit, Level, Posterior, fit_level, predictive_fit
+from gravbasin.inference.evidence import Fit, Level, Posterior, predictive_fit
 from gravbasin.inference.likelihood import RingLikelihood, ring_likelihood, shape_scatter
-from gravbasin.inference.odds import log_odds
 from gravbasin.inference.response import ring_response
 from gravbasin.observed import (
     NoiseCheck,
@@ -31,6 +28,7 @@ from gravbasin.observed import (
 )
 from gravbasin.runs.families import compare_families, impact_bank
 from gravbasin.runs.forward_run import Modelled
+from gravbasin.runs.places import Places, places_of
 from gravbasin.scenario import Scenario
 
 __all__ = ["Comparison", "compare_with_map", "detect_without_map", "noise_of"]
@@ -52,9 +50,8 @@ class Comparison:
 
     Attributes
     ----------
-    noise, noise_check, level
-        Noise model, how well it foretells parts of the map left out (None for a stated one), and how its level varies
-        from place to place.
+    noise, noise_check
+        Noise model, and how well it foretells parts of the map left out (None for a stated one).
     rings : RingMeans
         Observed ring means, mGal; rings with little coverage left out.
     template, template_draws : (n_ring,), (n_ring, n_draw) arrays, mGal
@@ -73,19 +70,14 @@ class Comparison:
         The impact family first, then its rivals; the last is regional noise alone.
     fit : Fit
         How well the impact family agrees with the map.
-    chance : Chance or None
-        How often other places do as well.
-    circularity : Circularity or None
-        Whether the anomaly is round; None where its rings leave the map.
-    odds : DataArray (northing, easting)
-        Logarithm of the odds of an impact structure against noise at every node with complete rings.
+    places : Places
+        What other places of the map say.
     maps : Dataset (northing, easting)
         observed, regional, residual, modelled, mGal; for pictures.
     """
 
     noise: NoiseModel
     noise_check: NoiseCheck | None
-    level: Level
     rings: RingMeans
     template: Array
     template_draws: Array
@@ -97,10 +89,28 @@ class Comparison:
     amplitude_error: float
     posteriors: tuple[Posterior, ...]
     fit: Fit
-    chance: Chance | None
-    circularity: Circularity | None
-    odds: xr.DataArray
+    places: Places
     maps: xr.Dataset
+
+    @property
+    def level(self) -> Level:
+        """How the noise level varies from place to place."""
+        return self.places.level
+
+    @property
+    def chance(self) -> Chance | None:
+        """How often other places do as well."""
+        return self.places.chance
+
+    @property
+    def circularity(self) -> Circularity | None:
+        """Whether the anomaly is round; None where its rings leave the map."""
+        return self.places.circularity
+
+    @property
+    def odds(self) -> xr.DataArray:
+        """Logarithm of the odds of an impact structure against noise at every node with complete rings."""
+        return self.places.odds
 
 
 def noise_of(scenario: Scenario, observed: xr.DataArray | None) -> NoiseModel:
@@ -154,7 +164,18 @@ def compare_with_map(
     progress("drawing impact structures")
     bank = impact_bank(scenario, modelled.radius)
     progress("searching the map for chance circles")
-    places = _Places.of(scenario, modelled, observed, noise, rings, bank, likelihoods[0], response)
+    places = places_of(
+        observed,
+        rings,
+        noise,
+        bank,
+        likelihoods[0],
+        response,
+        diameter=_diameter(scenario),
+        resolution=_resolution(scenario),
+        centres=scenario.inference.chance_centres,
+        seed=scenario.seed,
+    )
     progress("weighing rivals")
     posteriors = compare_families(scenario, bank, response, likelihoods, rings.mean, places.level)
     impact = posteriors[0]
@@ -164,7 +185,6 @@ def compare_with_map(
     return Comparison(
         noise=noise,
         noise_check=check_noise(observed, noise, exclude=exclude) if noise.n_points else None,
-        level=places.level,
         rings=rings,
         template=templates[:, 0],
         template_draws=templates[:, 1:],
@@ -178,9 +198,7 @@ def compare_with_map(
         amplitude_error=amplitude_error,
         posteriors=posteriors,
         fit=predictive_fit(likelihoods[0], impact_rings, rings.mean, impact.weights, places.level),
-        chance=places.chance,
-        circularity=places.circularity,
-        odds=places.odds,
+        places=places,
         maps=_maps(observed, noise, modelled, np.hypot(easting, northing[:, None]), exclude),
     )
 
@@ -197,83 +215,6 @@ def detect_without_map(scenario: Scenario, modelled: Modelled, noise: NoiseModel
     templates = best.response @ modelled.profiles
     robust = ring_likelihood(best.covariance + shape_scatter(templates, best.area), best.likelihood.regional)
     return _seen(scenario, modelled, robust, [s.covariance for s in stencils], templates, best.response, 2 * spacing)
-
-
-@dataclasses.dataclass(frozen=True, eq=False)
-class _Places:
-    """What other places of the map say: how rough they are, how often they do as well, how round they are."""
-
-    level: Level
-    chance: Chance | None
-    circularity: Circularity | None
-    odds: xr.DataArray
-
-    @classmethod
-    def of(
-        cls,
-        scenario: Scenario,
-        modelled: Modelled,
-        observed: xr.DataArray,
-        noise: NoiseModel,
-        rings: RingMeans,
-        bank: Bank,
-        likelihood: RingLikelihood,
-        response: Array,
-    ) -> _Places:
-        stencil = Stencil.build(
-            rings.edges_m, rings.spacing_m, noise, radius=modelled.radius, resolution=_resolution(scenario)
-        )
-        rows, columns = complete_nodes(observed, stencil.shape)
-        data = stencil.ring_means(observed.values, rows, columns)
-        away = np.hypot(
-            observed.easting.values[columns] - rings.centre[0], observed.northing.values[rows] - rings.centre[1]
-        )
-        elsewhere = away > _diameter(scenario)
-        cell = rings.spacing_m[0] * rings.spacing_m[1]
-        independent = elsewhere.sum() * cell / (np.pi * _diameter(scenario) ** 2)
-        misfits = np.sum(stencil.likelihood.whiten(data[:, elsewhere]) ** 2, axis=0)
-        level = fit_level(misfits, stencil.likelihood.dof, float(independent))
-        templates = stencil.response @ bank.profiles.T
-        found = log_odds(stencil.likelihood, templates, bank.log_weight, data, level)
-        here = log_odds(likelihood, response @ bank.profiles.T, bank.log_weight, rings.mean[:, None], level)
-        chance = None
-        if scenario.inference.chance_centres:
-            chance = chance_of(
-                float(here[0]),
-                found[elsewhere],
-                centres=scenario.inference.chance_centres,
-                independent=float(independent),
-                seed=scenario.seed,
-                fields=lambda count: log_odds(
-                    stencil.likelihood,
-                    templates,
-                    bank.log_weight,
-                    random_ring_means(stencil, rings.spacing_m, noise, level, count, scenario.seed),
-                    level,
-                ),
-            )
-        harmonics = Harmonics.build(rings.edges_m, rings.spacing_m, noise)
-        rng = np.random.default_rng([scenario.seed, 3])
-        nodes = rng.choice(np.flatnonzero(elsewhere), min(500, int(elsewhere.sum())), replace=False)
-        node = (
-            int(np.argmin(np.abs(observed.northing.values - rings.centre[1]))),
-            int(np.argmin(np.abs(observed.easting.values - rings.centre[0]))),
-        )
-        circularity = circularity_test(observed, harmonics, node, (rows[nodes], columns[nodes]))
-        return cls(level, chance, circularity, _odds_map(observed, rows, columns, found))
-
-
-def _odds_map(observed: xr.DataArray, rows: NDArray[np.intp], columns: NDArray[np.intp], found: Array) -> xr.DataArray:
-    values = np.full(observed.shape, np.nan)
-    values[rows, columns] = found
-    return labels.data_array(
-        values,
-        ("northing", "easting"),
-        {"northing": observed.northing.values, "easting": observed.easting.values},
-        name="log_odds",
-        units="1",
-        long_name="natural logarithm of the odds of an impact structure against regional noise, before any prior odds",
-    )
 
 
 def _plausible(scenario: Scenario, noise: NoiseModel) -> list[NoiseModel]:

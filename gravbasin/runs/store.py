@@ -96,6 +96,7 @@ def write_text(path: Path, text: str) -> None:
 def write_run(result: Assessment, folder: Path) -> None:
     """Write the run folder of an assessment: verdict, report, section, anomaly, profile, figures, scenario."""
     from gravbasin.report.html import assessment_report
+    from gravbasin.runs.search import candidate_table
 
     with replaced_folder(folder) as fresh:
         result.modelled.section.to_netcdf(fresh / "section.nc", engine="h5netcdf")
@@ -104,6 +105,8 @@ def write_run(result: Assessment, folder: Path) -> None:
             maps = result.comparison.maps.assign(log_odds=result.comparison.odds)
             maps.to_netcdf(fresh / "map.nc", engine="h5netcdf")
         result.profile.to_netcdf(fresh / "profile.nc", engine="h5netcdf")
+        if "search" in result.verdict:
+            candidate_table(list(result.candidates)).to_csv(fresh / "candidates.csv", index=False)
         (fresh / "scenario.toml").write_text(scenario_toml(result.scenario), encoding="utf-8")
         report, figures = assessment_report(result)
         (fresh / "figures").mkdir()
