@@ -110,8 +110,8 @@ def _numbers(verdict: dict[str, Any]) -> Iterator[str]:
         )
     for place in verdict.get("search", []):
         yield (
-            f"candidate {place['rank']:<2} easting {place['easting_km']:.1f} km, "
-            f"northing {place['northing_km']:.1f} km, log odds {place['log_odds']:+.1f}, search-wide p {place['search_p_value']:.2f}"
+            f"candidate {place['rank']:<2} {place['easting_km']:.1f} km east, {place['northing_km']:.1f} km north, "
+            f"log odds {place['log_odds']:+.1f}, search-wide p {place['search_p_value']:.2f}"
         )
     audit = verdict["audit"]
     yield f"audit       {audit['max_abs_difference_mgal']:.1e} mGal from {audit['reference']}"
