@@ -484,6 +484,22 @@ def test_every_motion_keeps_volumes(tilt, dip, ratio, long, slope, deeper):
     assert is_axisymmetric(bend) == (tilt == 0.0 and ratio == 1.0 and slope == 0.0)
 
 
+def test_stretch_comes_before_uneven_erosion_and_that_before_tilt():
+    """One point carried by hand, with the long axis to the east, erosion deepening to the north, dip to the west."""
+    bend = Deformation(
+        stretch_ratio=2.25,
+        stretch_azimuth_degrees=90.0,
+        erosion_slope_m_per_km=100.0,
+        tilt_degrees=20.0,
+        tilt_azimuth_degrees=270.0,
+    )
+    east, north, down = 1.5 * 1e3, 2.4e3 / 1.5, 3e3
+    down -= 0.1 * north  # where more was eroded, the ground is nearer
+    sin, cos = np.sin(np.radians(20.0)), np.cos(np.radians(20.0))
+    west, down = -east * cos - down * sin, -east * sin + down * cos
+    assert_allclose(np.linalg.inv(motion_of(bend).matrix) @ [1e3, 2.4e3, 3e3], [-west, north, down], rtol=1e-12)
+
+
 def test_which_deformations_leave_rings():
     assert is_axisymmetric(None)
     assert is_axisymmetric(Deformation(tilt_azimuth_degrees=20.0))
