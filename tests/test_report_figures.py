@@ -12,13 +12,19 @@ import pytest
 import xarray as xr
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from matplotlib.collections import PathCollection
 from matplotlib.colors import to_rgb
+from scipy.interpolate import RegularGridInterpolator
 
-from gravbasin.crater import PARTS, UNITS, density_section
+from gravbasin.crater import PARTS, UNITS, Range, density_section
+from gravbasin.inference.bank import Bank
+from gravbasin.inference.evidence import Posterior
 from gravbasin.report import profile_figures, section_figure
 from gravbasin.report.canvas import blank_figure, round_limit, spread, svg
 from gravbasin.report.map_figure import map_figure
 from gravbasin.report.odds_figures import chance_figure, detectability_figure
+from gravbasin.report.odds_map_figure import odds_figure
+from gravbasin.report.posterior_figure import FEW, highest_levels, joint_density, posterior_figure
 from gravbasin.scenario import Scenario
 
 RIM = 20e3
@@ -50,6 +56,9 @@ def profile() -> xr.Dataset:
             "observed": ("ring_radius", np.sin(rings / 7e3) - 30.0),
             "regional": ("ring_radius", -30.0 + rings / 50e3),
             "modelled_rings": ("ring_radius", np.interp(rings, radius, total)),
+            "fitted": ("ring_radius", np.interp(rings, radius, total) + 0.5),
+            "fitted_low": ("ring_radius", np.interp(rings, radius, total) - 1.0),
+            "fitted_high": ("ring_radius", np.interp(rings, radius, total) + 3.0),
             "standard_error": ("ring_radius", np.full(12, 1.5)),
         },
         coords={"radius": radius, "ring_radius": rings, "part": list(PARTS)},
@@ -124,6 +133,17 @@ def test_profile_draws_observed_less_regional(profile) -> None:
     np.testing.assert_allclose(np.diff(ends, axis=1).ravel(), 2 * profile.standard_error.values)
 
 
+def test_profile_bands_what_fits_and_lines_the_scenario(profile) -> None:
+    axes = profile_figures.profile_figure(profile, rim_radius_m=RIM).axes[0]
+    band = axes.collections[0].get_paths()[0].vertices
+    for name in ("fitted_low", "fitted_high"):
+        ring = np.stack([profile.ring_radius.values / 1e3, profile[name].values], axis=1)
+        assert all(np.isclose(band, point).all(axis=1).any() for point in ring)
+    lines = {line.get_label(): np.asarray(line.get_ydata(), dtype=float) for line in axes.lines}
+    np.testing.assert_allclose(lines["their median"], profile.fitted.values)
+    np.testing.assert_allclose(lines["the scenario's own structure"], profile.modelled_rings.values)
+
+
 def test_profile_without_a_map_draws_the_model_alone(profile) -> None:
     alone = profile[["modelled", "modelled_low", "modelled_high"]]
     figure = profile_figures.profile_figure(alone, rim_radius_m=RIM)
@@ -140,6 +160,78 @@ def test_drawn_parts_add_up_to_the_heavy_line_and_empty_ones_are_left_out(profil
     assert "suevite" not in labels
     assert "crustal uplift +5.0" in labels
     assert "all together −9.0" in labels
+
+
+def cloud(count: int, seed: int = 4, spread: float = 1.0) -> Posterior:
+    """A correlated cloud within the prior, with uneven weights."""
+    rng = np.random.default_rng(seed)
+    u, v = rng.normal(size=(2, count)) * spread
+    parameters = {"rim_diameter_km": 40.0 + 2.0 * u, "erosion_km": 2.0 + 0.4 * u + 0.1 * v}
+    weights = rng.uniform(0.2, 1.0, count)
+    weights /= weights.sum()
+    bank = Bank("impact", parameters, np.zeros(1), np.zeros((count, 1)), np.zeros(count))
+    return Posterior("impact", 0.0, 0.0, 1.0 / float(np.sum(weights**2)), weights, bank)
+
+
+PRIOR = {"rim_diameter_km": Range(20.0, 60.0, logarithmic=True), "erosion_km": Range(0.0, 5.0)}
+
+
+def test_contours_hold_the_share_of_weight_they_claim() -> None:
+    """400 points: a share of 0.9 has a sampling error of 0.015, and smoothing widens the contour, so 0.88 to 0.99."""
+    posterior = cloud(400)
+    values = np.stack(list(posterior.bank.parameters.values()))
+    x, y = np.linspace(30, 50, 80), np.linspace(0.3, 3.7, 90)
+    density = joint_density(values, posterior.weights, x, y, bounds=list(PRIOR.values()))
+    outer, inner = highest_levels(density, [0.9, 0.5])
+    assert outer < inner
+    at_points = RegularGridInterpolator((y, x), density)(values[::-1].T)
+    assert 0.88 < posterior.weights @ (at_points >= outer) < 0.99
+    assert 0.46 < posterior.weights @ (at_points >= inner) < 0.70
+
+
+def test_density_spilled_over_a_bound_comes_back() -> None:
+    """A prior that is all one block stays flat up to its edges, within 15 % of its mean at 4000 points."""
+    rng = np.random.default_rng(2)
+    bounds = [Range(0.0, 1.0), Range(2.0, 5.0)]
+    values = np.stack([bound.draw(rng, 4000) for bound in bounds])
+    edges = np.array([0.0, 0.5, 1.0]), np.array([2.0, 3.5, 5.0])
+    density = joint_density(values, np.full(4000, 1 / 4000), *edges, bounds=bounds)
+    edge_middles = density[[0, 1, 1, 2], [1, 0, 2, 1]]
+    np.testing.assert_allclose(edge_middles, density[1, 1], rtol=0.15)
+
+
+@pytest.mark.parametrize("count", [1, 2, 40, 400])
+def test_few_models_are_drawn_themselves_and_any_number_makes_a_picture(count) -> None:
+    posterior = cloud(count)
+    figure = posterior_figure(posterior, PRIOR, {"rim_diameter_km": 43.0, "erosion_km": 5.6})
+    joint = figure.axes[0]
+    points = [c for c in joint.collections if isinstance(c, PathCollection)]
+    assert bool(points) == (posterior.effective_size < FEW)
+    assert sum(len(c.get_offsets()) for c in points) in (0, count)
+    marker = joint.lines[0]
+    assert (marker.get_xdata()[0], marker.get_ydata()[0]) == (43.0, 5.6)
+    (left, right), (bottom, top) = joint.get_xlim(), joint.get_ylim()
+    assert left < 43.0 < right
+    assert bottom < 5.6 < top  # beyond the prior, yet in the picture
+    heights = [bar.get_height() for bar in figure.axes[1].patches]
+    assert sum(heights) == pytest.approx(1.0, abs=0.02)
+
+
+def test_odds_map_is_blank_where_rings_leave_the_map_and_its_steps_hold_everything(maps) -> None:
+    odds = (maps.residual - 5.0) * 3.0
+    odds[:, :4] = np.nan
+    figure = odds_figure(odds, centre_m=(480e3, 1000e3), rim_radius_m=RIM)
+    axes = figure.axes[0]
+    mesh = axes.collections[0]
+    drawn = np.ma.masked_invalid(np.asarray(mesh.get_array(), dtype=float).reshape(odds.shape))
+    np.testing.assert_array_equal(drawn.mask, np.isnan(odds.values))
+    steps = mesh.norm.boundaries
+    assert steps[0] == 0.0
+    assert steps[-1] >= float(odds.max())
+    colours = mesh.cmap(mesh.norm(np.array([-4.0, 0.5, 2.0, 8.0])))
+    lightness = colours[:, :3] @ [0.299, 0.587, 0.114]
+    assert np.all(np.diff(lightness) < -0.04)  # darker with better odds, so grey keeps the order
+    assert axes.get_xlim() == (-82.5, 102.5)
 
 
 def test_every_place_is_counted_once_and_those_beyond_are_marked() -> None:

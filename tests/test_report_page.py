@@ -13,13 +13,18 @@ import numpy as np
 import pytest
 
 import gravbasin as gb
+from gravbasin.crater import KNOWN_RIVALS
 from gravbasin.observed import NoiseModel
 from gravbasin.report.html import assessment_report
-from gravbasin.runs.assess import CAUTIONS
+from gravbasin.runs.families import NOISE_ALONE
+from gravbasin.runs.search import Candidate, candidate_table
+from gravbasin.runs.verdict import CAUTIONS
 
 NAME = 'Basin <script>alert("x")</script> & Co'
-SMALL = {"layers": 20, "rings": 40, "draws": 20}
-FIGURES = ["section", "maps", "profile", "parts", "detectability", "chance"]
+SMALL = {"layers": 20, "rings": 40, "draws": 20, "grid_step_km": 1.5}
+FIGURES = ["section", "maps", "profile", "posterior", "parts", "detectability", "chance", "odds"]
+HEADS = [f"head-{name}" for name in FIGURES]
+IMPACT = "eroded impact structure"
 VOID = {"meta", "link", "br", "hr", "img", "input"}
 
 
@@ -55,7 +60,8 @@ def compared(alone, tmp_path_factory) -> gb.runs.assess.Assessment:
     grid.to_dataset(name="bouguer").to_netcdf(path, engine="h5netcdf")
     observed = {"path": str(path), "centre_easting_km": 1140.0, "centre_northing_km": 2120.0}
     inference = {"chance_centres": 200, "noise_points": 150, "noise_draws": 4}
-    return gb.assess(scenario(observed=observed, inference=inference))
+    prior = {"models": 200, "odds": {"granite pluton": 3.0}}
+    return gb.assess(scenario(observed=observed, inference=inference, prior=prior))
 
 
 @pytest.fixture(scope="module")
@@ -101,12 +107,12 @@ def test_with_a_map_everything_is_there_in_order(compared, pages) -> None:
     assert sorted(figures) == sorted(FIGURES)
     heads = [attrs["id"] for tag, attrs in page.tags if tag in ("h1", "h2") and "id" in attrs]
     assert heads == [
-        "verdict", "cautions", "untested", "numbers", *(f"head-{name}" for name in FIGURES),
+        "verdict", "cautions", "untested", "numbers", *HEADS[:3], "rivals", HEADS[3], "roundness", *HEADS[4:],
         "dimensions", "noise", "audit", "provenance",
     ]  # fmt: skip
     assert compared.verdict["statement"] in page.text
     assert all(caution in page.text for caution in CAUTIONS)
-    for words in ("does not mean “only”", "Erosion trades against", "Centre and diameter were taken as given"):
+    for words in ("does not mean “only”", "Two bodies", "Centre and size range were taken as given"):
         assert words in page.text
     facts = compared.verdict["provenance"]
     assert facts["scenario_sha256"] in page.text
@@ -117,16 +123,23 @@ def test_with_a_map_everything_is_there_in_order(compared, pages) -> None:
 def test_without_a_map_missing_figures_are_explained(pages) -> None:
     html, figures = pages["alone"]
     page = Reader(html)
-    assert sorted(figures) == sorted(set(FIGURES) - {"maps", "chance"})
+    assert sorted(figures) == sorted(set(FIGURES) - {"maps", "posterior", "chance", "odds"})
+    assert "Erosion trades against diameter and density contrast" in page.text
+    assert "Other bodies (a granite pluton, a mafic intrusion, a sag basin) were not compared" in page.text
     assert "no observed map, so no maps are drawn" in page.text
     assert "Without a map there are no other places to try" in page.text
     assert "Stated in the scenario" in page.text
     assert "Fit to the map" not in page.text
 
 
+def without(comparison, **change):
+    """The comparison with something about other places changed."""
+    return dataclasses.replace(comparison, places=dataclasses.replace(comparison.places, **change))
+
+
 def test_without_a_chance_test_its_absence_is_explained(compared) -> None:
     verdict = {key: value for key, value in compared.verdict.items() if key != "chance"}
-    comparison = dataclasses.replace(compared.comparison, chance=None)
+    comparison = without(compared.comparison, chance=None)
     html, figures = assessment_report(dataclasses.replace(compared, comparison=comparison, verdict=verdict))
     assert "chance" not in figures
     assert "chance_centres = 0" in Reader(html).text
@@ -159,7 +172,7 @@ def test_page_can_be_read_without_seeing_it(pages) -> None:
     attributes = dict(page.tags)
     assert attributes["html"]["lang"] == "en"
     pictures = [attrs for tag, attrs in page.tags if tag == "svg"]
-    assert len(pictures) == 6
+    assert len(pictures) == len(FIGURES)
     assert all(attrs["role"] == "img" and attrs["aria-labelledby"] for attrs in pictures)
     levels = [int(tag[1]) for tag, _ in page.tags if re.fullmatch(r"h[1-6]", tag)]
     assert levels[0] == 1
@@ -206,9 +219,52 @@ def test_printed_numbers_are_the_verdicts(compared, pages) -> None:
     assert float(snr) == pytest.approx(verdict["detectability"]["snr"], rel=0.06)
 
 
-def test_rivals_are_not_called_untested_once_they_were(compared) -> None:
-    tested = dataclasses.replace(compared, verdict=compared.verdict | {"rivals": []})
-    assert "Other bodies (a granite pluton" not in assessment_report(tested)[0]
+def test_rivals_stand_with_their_odds_the_most_probable_first(compared, pages) -> None:
+    text = Reader(pages["compared"][0]).text
+    table = text[text.index("What sets it apart") : text.index("Diameter and erosion")]
+    rows = sorted(compared.verdict["rivals"], key=lambda row: -row["probability"])
+    places = [table.index(row["name"]) for row in rows]
+    assert places == sorted(places)
+    assert {row["name"] for row in rows} == {IMPACT, NOISE_ALONE, *KNOWN_RIVALS}
+    for rival in KNOWN_RIVALS.values():
+        assert rival.tells in table
+    best = max(row["log_evidence"] for row in rows)
+    for row in rows:
+        shown = float(re.search(rf"{row['name']} ([+−\d.]+)", table)[1].replace("−", "-"))
+        assert shown == pytest.approx(row["log_evidence"] - best, abs=0.051)
+    assert "granite pluton" in table
+    assert f" {3:g} " in table[table.index("granite pluton") : table.index("flat floor, no central high")]  # prior odds
+
+
+def test_fitted_intervals_are_the_verdicts(compared, pages) -> None:
+    text = Reader(pages["compared"][0]).text
+    for words, key in (("rim diameter, fitted", "rim_diameter_km"), ("erosion, fitted", "erosion_km")):
+        shown = re.search(rf"{words} ([\d.]+) km \(([\d.]+) to ([\d.]+)\)", text).groups()
+        expected = compared.verdict["fit"][key]
+        width = expected["high"] - expected["low"]
+        for number, name in zip(shown, ("median", "low", "high"), strict=True):
+            assert float(number) == pytest.approx(expected[name], abs=0.06 * max(width, 0.1 * expected["high"]))
+
+
+def test_a_map_too_small_for_other_centres_says_so(compared) -> None:
+    comparison = without(compared.comparison, odds=compared.comparison.odds * np.nan)
+    html, figures = assessment_report(dataclasses.replace(compared, comparison=comparison))
+    assert "odds" not in figures
+    assert "rings about any other place leave the map" in Reader(html).text
+
+
+def test_candidates_of_a_search_are_listed_and_marked_on_the_map(compared, pages) -> None:
+    assert "Candidates" not in Reader(pages["compared"][0]).text
+    found = (Candidate(1140e3, 2120e3, 8.25, 0.01), Candidate(1080e3, 2090e3, 1.5, 0.64))
+    table = candidate_table(list(found)).to_dict("records")
+    html, figures = assessment_report(
+        dataclasses.replace(compared, candidates=found, verdict=compared.verdict | {"search": table})
+    )
+    text = Reader(html).text
+    assert "1 1140.0 2120.0 +8.2 0.010 2 1080.0 2090.0 +1.5 0.64" in text
+    assert figures["odds"] != pages["compared"][1]["odds"]
+    nothing = dataclasses.replace(compared, verdict=compared.verdict | {"search": []})
+    assert "No place on this map" in Reader(assessment_report(nothing)[0]).text
 
 
 def test_page_is_small(pages) -> None:

@@ -7,9 +7,12 @@ from typing import TYPE_CHECKING
 
 from scipy import stats
 
+from gravbasin.inference.bank import ImpactFamily
 from gravbasin.report.canvas import svg
 from gravbasin.report.map_figure import map_figure
 from gravbasin.report.odds_figures import chance_figure, detectability_figure
+from gravbasin.report.odds_map_figure import odds_figure
+from gravbasin.report.posterior_figure import FEW, posterior_figure
 from gravbasin.report.profile_figures import parts_figure, profile_figure
 from gravbasin.report.section_figure import section_figure
 from gravbasin.report.words import given, number, percent, plus_minus, probability, signed
@@ -20,9 +23,21 @@ if TYPE_CHECKING:
     from gravbasin.runs.assess import Assessment
     from gravbasin.runs.compare import Comparison
 
-__all__ = ["Drawing", "assessment_figures"]
+__all__ = ["TITLES", "Drawing", "assessment_figures"]
 
 KM = 1000.0
+
+TITLES = {
+    "section": "Cross-section",
+    "maps": "Maps",
+    "profile": "Radial profile",
+    "posterior": "Diameter and erosion",
+    "parts": "What makes the anomaly",
+    "detectability": "Could it be seen?",
+    "chance": "How often by chance?",
+    "odds": "Odds over the map",
+}
+"""Every figure an assessment can have, in the order of the page."""
 
 
 @dataclasses.dataclass(frozen=True, eq=False)
@@ -49,13 +64,16 @@ def assessment_figures(result: Assessment) -> dict[str, Drawing]:
     """Every figure an assessment has, by name; without a map there are no maps and no chance figure."""
     drawings = [_section(result), _profile(result), _parts(result), _detectability(result)]
     if result.comparison is not None:
-        drawings.append(_maps(result, result.comparison))
+        drawings += [_maps(result, result.comparison), _posterior(result, result.comparison)]
         if result.comparison.chance is not None:
             drawings.append(_chance(result.comparison))
+        if result.comparison.odds.notnull().any():
+            drawings.append(_odds(result, result.comparison))
     return {drawing.name: drawing for drawing in drawings}
 
 
-def _drawing(figure: Figure, name: str, title: str, caption: str, description: str) -> Drawing:
+def _drawing(figure: Figure, name: str, caption: str, description: str) -> Drawing:
+    title = TITLES[name]
     return Drawing(name, title, caption, svg(figure, name=name, title=title, description=description))
 
 
@@ -73,7 +91,6 @@ def _section(result: Assessment) -> Drawing:
     return _drawing(
         section_figure(result.modelled.section, result.profile, rim_radius_m=_rim_radius(result)),
         "section",
-        "Cross-section",
         "The structure cut through its axis, and mirrored about it: the anomaly it makes, the density contrast to the "
         "intact column, and the units. Thin full contours mark a surplus, dashed ones a deficit; the heavy line is "
         "today's ground.",
@@ -90,7 +107,6 @@ def _maps(result: Assessment, comparison: Comparison) -> Drawing:
             comparison.maps, centre_m=comparison.rings.centre, rim_radius_m=_rim_radius(result), disc_radius_m=disc
         ),
         "maps",
-        "Maps",
         f"Distances from the given centre, easting {east} km and northing {north} km. Full circle: the rim. Dashed "
         f"circle: the disc that was tested, {given(disc / KM)} km in radius. The regional drawn here was fitted "
         "outside the structure and serves the eye only; every number in this report estimates it together with the "
@@ -102,19 +118,60 @@ def _maps(result: Assessment, comparison: Comparison) -> Drawing:
 
 def _profile(result: Assessment) -> Drawing:
     if result.comparison is None:
-        rest = "No map was compared, so only the model is drawn."
+        caption = (
+            "Anomaly against distance from the centre; the band holds 90 % of the draws from the scatter of size laws "
+            "and contrasts. No map was compared, so only the model is drawn."
+        )
     else:
-        rest = (
-            "Observed ring means have the jointly estimated regional removed. Their errors are correlated: "
-            "neighbouring rings err together, so a run of points on one side is no news. The misfit test counts that."
+        caption = (
+            "Ring means against distance from the centre. Line and band: the impact structures within the prior that "
+            "fit the map. Dashed: the structure of the scenario itself. Points: the map, its jointly estimated "
+            "regional removed. Their errors are correlated: neighbouring rings err together, so a run of points on one "
+            "side is no news. The test of the fit counts that."
         )
     return _drawing(
         profile_figure(result.profile, rim_radius_m=_rim_radius(result)),
         "profile",
-        "Radial profile",
-        f"Anomaly against distance from the centre; the band holds 90 % of the draws from the scatter of size laws and "
-        f"contrasts. {rest}",
+        caption,
         "Anomaly against distance from the centre. " + _anomaly_in_words(result),
+    )
+
+
+def _posterior(result: Assessment, comparison: Comparison) -> Drawing:
+    posterior, fit = comparison.posteriors[0], result.verdict["fit"]
+    own = {key: result.verdict["model"][key] for key in ("rim_diameter_km", "erosion_km")}
+    ranges = ImpactFamily(result.scenario).ranges
+    dots = " Rings: the models behind it, larger where they weigh more." if posterior.effective_size < FEW else ""
+    spans = " and ".join(f"{given(ranges[key].low)} to {given(ranges[key].high)} km" for key in own)
+    d, e = fit["rim_diameter_km"], fit["erosion_km"]
+    return _drawing(
+        posterior_figure(posterior, ranges, own),
+        "posterior",
+        f"What the map leaves of diameter and erosion together, if it is an impact structure; contrasts and "
+        f"size laws vary along, so the spread holds what they leave open.{dots} At the sides: each "
+        f"alone, its median and 90 % interval, and dashed what was thought before (from {spans}). Cross and lines: the "
+        "scenario.",
+        f"Joint posterior of rim diameter, {number(d['low'])} to {number(d['high'])} km, and erosion, "
+        f"{number(e['low'], 2)} to {number(e['high'], 2)} km at 90 %.",
+    )
+
+
+def _odds(result: Assessment, comparison: Comparison) -> Drawing:
+    largest = float(comparison.odds.max())
+    numbers = " Numbers: the candidates below." if result.candidates else ""
+    return _drawing(
+        odds_figure(
+            comparison.odds,
+            centre_m=comparison.rings.centre,
+            rim_radius_m=_rim_radius(result),
+            candidates=[(found.easting, found.northing) for found in result.candidates],
+        ),
+        "odds",
+        "At every place, how much better impact structures of the prior, centred there, explain the rings about it "
+        "than regional noise does: natural logarithm of the odds, before any prior odds. 3 is odds of 20 to 1; grey: "
+        "noise does better. Circle: the rim of the structure. Blank: the rings leave the map. Other bodies raise the "
+        f"odds too, here and elsewhere.{numbers}",
+        f"Map of the logarithm of the odds of an impact structure against regional noise, {signed(largest)} at most.",
     )
 
 
@@ -124,7 +181,6 @@ def _parts(result: Assessment) -> Drawing:
     return _drawing(
         parts_figure(result.profile, rim_radius_m=_rim_radius(result)),
         "parts",
-        "What makes the anomaly",
         "The modelled anomaly split by cause; the causes add up to the heavy line. A cause without any contrast left "
         "today (worn away, or never there) has no line.",
         f"Modelled anomaly by cause, against distance. At the centre: {listed}.",
@@ -144,7 +200,6 @@ def _detectability(result: Assessment) -> Drawing:
             detected=d["detection_probability"],
         ),
         "detectability",
-        "Could it be seen?",
         "A filter made for this structure returns one number. Dashed: what noise alone gives. Full line: what noise "
         "and the structure give. The bar holds 90 % of the expected values over plausible noise and the scatter of "
         "the structure. This is for a place, size and sign known beforehand; a search over a map needs more.",
@@ -171,7 +226,6 @@ def _chance(comparison: Comparison) -> Drawing:
             source=chance.source,
         ),
         "chance",
-        "How often by chance?",
         f"The same statistic at {where}. Hatched: those that do as well as the structure, {share}. The centre and the "
         "size were given, not searched for.",
         f"Histogram of the statistic elsewhere; the structure has {plus_minus(chance.statistic, 0.1)}; "

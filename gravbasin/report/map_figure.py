@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-__all__ = ["map_figure"]
+__all__ = ["AXIS_LABELS", "draw_circle", "extent_of", "map_figure"]
 
 KM = 1000.0
 LEFT, GAP, BAR, TOP, BOTTOM = 0.7, 0.25, 0.14, 0.35, 0.85
@@ -42,7 +42,7 @@ def map_figure(maps: xr.Dataset, *, centre_m: tuple[float, float], rim_radius_m:
     Observed and regional share one colour scale, residual and modelled another that is symmetric about zero.
     """
     east, north = ((maps[name].values - c) / KM for name, c in zip(("easting", "northing"), centre_m, strict=True))
-    extent = _extent(east), _extent(north)
+    extent = extent_of(east), extent_of(north)
     wide, tall = _panel_size(np.ptp(extent[0]), np.ptp(extent[1]))
     total = 2 * (TOP + tall) + BOTTOM
     across = LEFT + 2 * wide + GAP + 0.12 + BAR + 0.75
@@ -59,7 +59,8 @@ def map_figure(maps: xr.Dataset, *, centre_m: tuple[float, float], rim_radius_m:
             left = LEFT + column * (wide + GAP)
             axes = figure.add_axes((left / across, bottom / total, wide / across, tall / total))
             mesh = _panel(axes, maps[name], (east, north), scales[row])
-            _circles(axes, rim_radius_m / KM, disc_radius_m / KM)
+            draw_circle(axes, rim_radius_m / KM, "solid")
+            draw_circle(axes, disc_radius_m / KM, (0, (4, 3)))
             axes.set(xlim=extent[0], ylim=extent[1], aspect="equal")
             axes.tick_params(labelbottom=row == 1, labelleft=column == 0)
             x, y = AXIS_LABELS[0] if row == 1 else "", AXIS_LABELS[1] if column == 0 else ""
@@ -82,7 +83,8 @@ TITLES = {
 }
 
 
-def _extent(axis: np.ndarray) -> tuple[float, float]:
+def extent_of(axis: np.ndarray) -> tuple[float, float]:
+    """Ends of an even axis, half a step beyond its nodes."""
     half = 0.5 * (axis[1] - axis[0])
     return float(axis[0] - half), float(axis[-1] + half)
 
@@ -106,7 +108,7 @@ def _panel(axes: Axes, values: xr.DataArray, at: tuple[np.ndarray, np.ndarray], 
     return mesh
 
 
-def _circles(axes: Axes, rim: float, disc: float) -> None:
-    for radius, style in ((rim, "solid"), (disc, (0, (4, 3)))):
-        axes.add_patch(Circle((0, 0), radius, fill=False, edgecolor="white", linewidth=2.4))
-        axes.add_patch(Circle((0, 0), radius, fill=False, edgecolor=INK, linewidth=1.2, linestyle=style))
+def draw_circle(axes: Axes, radius: float, style: Any) -> None:
+    """A circle about the origin that stands out on light and dark."""
+    axes.add_patch(Circle((0, 0), radius, fill=False, edgecolor="white", linewidth=2.4))
+    axes.add_patch(Circle((0, 0), radius, fill=False, edgecolor=INK, linewidth=1.2, linestyle=style))

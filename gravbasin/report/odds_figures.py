@@ -111,7 +111,7 @@ def chance_figure(null: Array, statistic: float, *, p_value: float, standard_err
         fontsize=TEXT,
         color=INK,
     )
-    label = "amplitude of the model over its standard error (local noise level)"
+    label = "natural logarithm of the odds of an impact structure against regional noise"
     tidy(axes, x=label, y=f"count {place.get(source, source)}")
     axes.set(ylim=(0, top), xlim=(edges[0], edges[-1]))
     return figure

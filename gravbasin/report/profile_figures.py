@@ -44,13 +44,13 @@ _LOOK: dict[str, tuple[str, Any]] = {
 
 
 def profile_figure(profile: xr.Dataset, *, rim_radius_m: float) -> Figure:
-    """Anomaly against distance: the model with its band and, where a map was compared, the observed ring means.
+    """Anomaly against distance: the model with its band or, where a map was compared, what the map left of the family.
 
     Parameters
     ----------
     profile : Dataset
-        modelled, modelled_low, modelled_high (radius); with a map also observed, standard_error, regional,
-        modelled_rings (ring_radius); mGal.
+        modelled, modelled_low, modelled_high (radius); with a map also observed, standard_error, regional, fitted,
+        fitted_low, fitted_high, modelled_rings (ring_radius); mGal.
     rim_radius_m : float
         Rim of the structure; the upper axis counts in it.
     """
@@ -58,19 +58,11 @@ def profile_figure(profile: xr.Dataset, *, rim_radius_m: float) -> Figure:
     axes = figure.add_axes((0.09, 0.19, 0.88, 0.68))
     compared = "observed" in profile
     reach = float(profile.ring_radius[-1]) * 1.02 if compared else 3.0 * rim_radius_m
-    radius = profile.radius.values
-    x = np.append(radius[radius < reach], reach) / KM
-
-    def model(name: str) -> np.ndarray:
-        return np.interp(x, radius / KM, profile[name].values)
-
     axes.axhline(0.0, color=FAINT, linewidth=0.9, zorder=0)
-    axes.fill_between(
-        x, model("modelled_low"), model("modelled_high"), color=BAND, linewidth=0, label="5–95 % of the model's scatter"
-    )
-    axes.plot(x, model("modelled"), color=MODEL, linewidth=1.8, label="modelled")
     if compared:
         _rings(axes, profile)
+    else:
+        _model(axes, profile, reach)
     tidy(axes, x="distance from the centre (km)", y="anomaly (mGal)")
     axes.set_xlim(0, reach / KM)
     mark_rim(axes, rim_radius_m / KM)
@@ -90,17 +82,32 @@ def profile_figure(profile: xr.Dataset, *, rim_radius_m: float) -> Figure:
     return figure
 
 
+def _model(axes: Axes, profile: xr.Dataset, reach: float) -> None:
+    radius = profile.radius.values
+    x = np.append(radius[radius < reach], reach) / KM
+
+    def model(name: str) -> np.ndarray:
+        return np.interp(x, radius / KM, profile[name].values)
+
+    low, high = model("modelled_low"), model("modelled_high")
+    axes.fill_between(x, low, high, color=BAND, linewidth=0, label="5–95 % of the model's scatter")
+    axes.plot(x, model("modelled"), color=MODEL, linewidth=1.8, label="modelled")
+
+
 def _rings(axes: Axes, profile: xr.Dataset) -> None:
+    """All as ring means through the map's sampling, so that like is compared with like."""
     at = profile.ring_radius.values / KM
+    axes.fill_between(
+        at, profile.fitted_low, profile.fitted_high, color=BAND, linewidth=0, label="impact structures that fit, 5–95 %"
+    )
+    axes.plot(at, profile.fitted, color=MODEL, linewidth=1.8, label="their median")
     axes.plot(
         at,
         profile.modelled_rings,
-        color=MODEL,
-        linewidth=0,
-        marker="D",
-        markersize=4,
-        markerfacecolor="white",
-        label="modelled, as the map's rings would show it",
+        color=INK,
+        linewidth=0.9,
+        linestyle=(0, (5, 2)),
+        label="the scenario's own structure",
     )
     axes.errorbar(
         at,
@@ -111,7 +118,7 @@ def _rings(axes: Axes, profile: xr.Dataset) -> None:
         markersize=3.5,
         elinewidth=0.9,
         capsize=2,
-        label="observed ring means minus regional, ± 1 standard error",
+        label="observed minus regional, ± 1 standard error",
     )
 
 

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Mapping
+import math
+from collections.abc import Iterable, Mapping
 from typing import Any, NamedTuple
 
-from gravbasin.crater import CraterDimensions
+from gravbasin.crater import CraterDimensions, Rival
 from gravbasin.report.words import given, number, percent, plus_minus, probability, signed
 
-__all__ = ["Row", "audit_rows", "dimension_rows", "key_numbers", "noise_rows"]
+__all__ = ["Row", "audit_rows", "candidate_rows", "dimension_rows", "key_numbers", "noise_rows", "rival_rows"]
 
 Verdict = Mapping[str, Any]
 
@@ -74,24 +75,45 @@ def _detectability(verdict: Verdict) -> list[Row]:
 
 def _fit(verdict: Verdict) -> list[Row]:
     f = verdict["fit"]
+    moho = [("rise of the Moho", "moho_uplift_km", "km")] if f["moho_uplift_km"]["high"] > 0 else []
+    intervals = [
+        ("rim diameter", "rim_diameter_km", "km"),
+        ("erosion", "erosion_km", "km"),
+        *moho,
+        ("excess mass", "excess_mass_kg", "kg"),
+    ]
     return [
         Row(
-            "misfit",
-            f"χ² = {number(f['chi2'])} for {f['dof']} degrees of freedom",
-            "noise and the model's scatter counted, regional free",
-        ),
-        Row(
-            "p-value of the misfit",
+            "p-value of the fit",
             probability(f["p_value"]),
-            "how often one as large arises if the model is true",
+            "how often maps drawn from the fitted structures would lie as far from them",
         ),
         Row(
-            "best multiple of the model",
-            plus_minus(f["amplitude"], f["amplitude_standard_error"]),
-            "1 if the model has the right size, 0 if there is nothing",
+            "misfit of the best one",
+            f"χ² = {number(f['chi2'])} for {f['dof']} degrees of freedom",
+            "typical noise, regional free",
         ),
+        *(
+            Row(f"{words}, fitted", _interval(f[key], unit), "median, and 90 % interval")
+            for words, key, unit in intervals
+        ),
+        Row(
+            "best multiple of the scenario's model",
+            plus_minus(f["amplitude"], f["amplitude_standard_error"]),
+            "1 if that model has the right size, 0 if there is nothing",
+        ),
+        Row("models it is worth", f"{f['effective_models']:.0f}", "equally weighted; intervals are rough below 50"),
         Row("rings compared", f"{f['rings']}, to {given(f['outer_radius_km'])} km from the centre"),
     ]
+
+
+def _interval(values: Mapping[str, float], unit: str) -> str:
+    """Median and interval to the digits that the interval allows."""
+    width = values["high"] - values["low"]
+    largest = max(abs(v) for v in values.values())
+    digits = 2 if width <= 0 else min(max(2, 2 + math.floor(math.log10(largest / width))), 5)
+    median, low, high = (number(values[key], digits) for key in ("median", "low", "high"))
+    return f"{median} {unit} ({low} to {high})"
 
 
 def _chance(verdict: Verdict) -> list[Row]:
@@ -100,7 +122,7 @@ def _chance(verdict: Verdict) -> list[Row]:
     rows = [
         Row("share that does as well", percent(c["p_value"], c["standard_error"]), "false alarms of this very test"),
         Row("tried", f"{c['centres']} {source.get(c['source'], c['source'])}"),
-        Row("statistic at the structure", signed(c["statistic"], 2), "amplitude over its error, local noise level"),
+        Row("statistic at the structure", signed(c["statistic"]), "natural log of the odds, impact against noise"),
     ]
     if c["source"] == "map":
         rows.append(
@@ -111,6 +133,70 @@ def _chance(verdict: Verdict) -> list[Row]:
             )
         )
     return rows
+
+
+class RivalRow(NamedTuple):
+    """One explanation of the map among others."""
+
+    name: str
+    log_evidence: str
+    prior_odds: str
+    probability: str
+    effective: str
+    tells: str
+
+
+IMPACT_TELLS = "high gradients at the rim, a central high or ring; shocked rocks prove it"
+NOISE_TELLS = "no body: a chance shape of the crust"
+
+
+def rival_rows(verdict: Verdict, rivals: Iterable[Rival]) -> list[RivalRow]:
+    """Every explanation that was weighed, the best first; the verdict lists the impact first and noise last."""
+    tells = {rival.name: rival.tells or "added by the scenario" for rival in rivals}
+    rows = verdict["rivals"]
+    best = max(row["log_evidence"] for row in rows)
+    impact, noise = rows[0]["name"], rows[-1]["name"]
+    tells |= {impact: IMPACT_TELLS, noise: NOISE_TELLS}
+    return [
+        RivalRow(
+            row["name"],
+            _log_evidence(row["log_evidence"] - best, row["standard_error"]),
+            given(row["prior_odds"]),
+            probability(row["probability"]),
+            f"{row['effective_models']:.0f}" if row["name"] != noise else "exact",
+            tells[row["name"]],
+        )
+        for row in sorted(rows, key=lambda row: -row["probability"])
+    ]
+
+
+class CandidateRow(NamedTuple):
+    """One place that a search over the map found."""
+
+    rank: str
+    easting: str
+    northing: str
+    log_odds: str
+    chance: str
+
+
+def candidate_rows(verdict: Verdict) -> list[CandidateRow]:
+    """What a search over the whole map found, best first; empty where none was made."""
+    return [
+        CandidateRow(
+            str(row["rank"]),
+            f"{row['easting_km']:.1f}",
+            f"{row['northing_km']:.1f}",
+            signed(row["log_odds"]),
+            number(row["search_p_value"], 2),
+        )
+        for row in verdict.get("search", ())
+    ]
+
+
+def _log_evidence(value: float, error: float) -> str:
+    """To a tenth, which is finer than evidence is ever worth; errors below that are left out."""
+    return signed(value) + (f" ± {number(error, 1)}" if error >= 0.05 else "")
 
 
 _DIMENSIONS = {
