@@ -20,7 +20,9 @@ from gravbasin.crater import (
 )
 from gravbasin.forward.audit import Audit, audit_anomaly
 from gravbasin.forward.layers import grid_anomaly, layered_prisms
+from gravbasin.forward.motion import is_axisymmetric
 from gravbasin.forward.rings import RingTable, ring_table
+from gravbasin.runs.deformed_run import deformed_anomaly
 from gravbasin.scenario import Scenario
 from gravbasin.scenario_file import scenario_hash
 
@@ -48,9 +50,9 @@ class Modelled:
     radius : (n_radius,) array
         Radii of the profiles, m.
     profile : (n_radius,) array
-        Anomaly, mGal.
+        Anomaly, mGal; of a deformed structure its mean over circles.
     parts : (part, n_radius) array
-        The same by cause; adds up to `profile`.
+        The anomaly of the undeformed structure by cause; adds up to `profile` where nothing is deformed.
     draws : (n_draw, n_radius) array
         Anomaly of draws from the scatter of size laws and contrasts, mGal.
     earth : str
@@ -126,7 +128,13 @@ def model_anomaly(scenario: Scenario, *, farthest: float = 0.0) -> Modelled:
     earth: Literal["flat", "sphere"] = "sphere" if audit.flat_earth_error_mgal > SPHERE_MATTERS_MGAL else "flat"
     table = ring_table(radius, mesh.radius_edges, mesh.depth_edges, height_m=height, earth=earth)
     parts = table.anomaly(contrast_parts(model, mesh))
+    profile = parts.sum(axis=0)
     scattered = _forward_draws(draws, mesh, table)
+    if not is_axisymmetric(scenario.deformation):
+        # Scatter of the structure and its deformation are taken as independent: draws move by the same difference.
+        deformed, grid = deformed_anomaly(scenario, model, mesh, grid, radius, earth)
+        grid = _placed(scenario, grid)
+        scattered, profile = scattered + (deformed - profile), deformed
     facts = labels.provenance(
         scenario=scenario_hash(scenario),
         versions=labels.versions("harmonica", "numpy", "scipy"),
@@ -137,7 +145,7 @@ def model_anomaly(scenario: Scenario, *, farthest: float = 0.0) -> Modelled:
         "provenance": facts,
         "long_name": "modelled anomaly: attraction of all contrasts to the intact column",
     }
-    return Modelled(model, section, grid, radius, parts.sum(axis=0), parts, scattered, earth, audit)
+    return Modelled(model, section, grid, radius, profile, parts, scattered, earth, audit)
 
 
 def _draws(scenario: Scenario) -> list[CraterModel]:
