@@ -22,9 +22,11 @@ from gravbasin.scenario.structure import (
     RivalBody,
     Samples,
 )
+from gravbasin.scenario.survey import Costs, StationErrors, Survey
 
 __all__ = [
     "Background",
+    "Costs",
     "Crater",
     "Damage",
     "Deformation",
@@ -41,6 +43,8 @@ __all__ = [
     "RivalBody",
     "Samples",
     "Scenario",
+    "StationErrors",
+    "Survey",
 ]
 
 
@@ -64,6 +68,7 @@ class Scenario(Table):
     model: Model = Model()
     prior: Prior = Prior()
     inference: Inference = Inference()
+    survey: Survey | None = None
 
     @model_validator(mode="after")
     def _together(self) -> Scenario:
