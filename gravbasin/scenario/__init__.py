@@ -23,6 +23,7 @@ from gravbasin.scenario.structure import (
     Samples,
 )
 from gravbasin.scenario.survey import Costs, StationErrors, Survey
+from gravbasin.scenario.sweep import Sweep, SweptField
 
 __all__ = [
     "Background",
@@ -45,6 +46,8 @@ __all__ = [
     "Scenario",
     "StationErrors",
     "Survey",
+    "Sweep",
+    "SweptField",
 ]
 
 
@@ -68,6 +71,7 @@ class Scenario(Table):
     model: Model = Model()
     prior: Prior = Prior()
     inference: Inference = Inference()
+    sweep: Sweep | None = None
     survey: Survey | None = None
 
     @model_validator(mode="after")
