@@ -117,6 +117,23 @@ def _numbers(verdict: dict[str, Any]) -> Iterator[str]:
     yield f"audit       {audit['max_abs_difference_mgal']:.1e} mGal from {audit['reference']}"
 
 
+@cli.command(epilog="Example: gravbasin section configs/fresh_20km.toml -o fresh_20km --set crater.rim_diameter_km=40")
+@_scenario_options("_section")
+def section(scenario: Path, out: Path | None, changes: tuple[str, ...], quiet: bool) -> None:
+    """Describe a scenario's structure: cross-section, anomaly by cause, what erosion takes, sizes with sources."""
+    from gravbasin.report.section_page import section_lines
+    from gravbasin.runs.section_run import describe_section
+    from gravbasin.scenario_file import load_scenario, parse_override
+
+    question = load_scenario(scenario, dict(parse_override(text) for text in changes))
+    folder = out or Path(f"{scenario.stem}_section")
+    with _told(quiet) as progress:
+        described = describe_section(question, folder, progress=progress)
+    if not quiet:
+        click.echo("\n".join(section_lines(described)))
+        click.echo(f"\nreport: {folder / 'report.html'}")
+
+
 @cli.command(epilog="Example: gravbasin init --rim-diameter-km 45 --erosion-km 4 -o starter.toml")
 @click.option("--rim-diameter-km", type=float, required=True, help="Final rim diameter before erosion.")
 @click.option("--erosion-km", type=float, default=0.0, show_default=True, help="Rock stripped since the impact.")

@@ -282,9 +282,9 @@ def test_colour_limit_holds_everything_and_wastes_little(values) -> None:
 
 
 def test_looks_differ_without_colour() -> None:
-    assert set(section_figure._LOOK) == set(UNITS)
+    assert set(section_figure.UNIT_LOOK) == set(UNITS)
     assert set(profile_figures._LOOK) == set(PARTS)
-    for (_, (a, hatch_a)), (_, (b, hatch_b)) in combinations(section_figure._LOOK.items(), 2):
+    for (_, (a, hatch_a)), (_, (b, hatch_b)) in combinations(section_figure.UNIT_LOOK.items(), 2):
         lightness = [np.dot(to_rgb(c), (0.299, 0.587, 0.114)) for c in (a, b)]
         assert hatch_a != hatch_b or abs(lightness[0] - lightness[1]) > 0.04
     dashes = [dash for _, dash in profile_figures._LOOK.values()]

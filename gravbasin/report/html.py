@@ -16,7 +16,7 @@ if TYPE_CHECKING:
 
     from gravbasin.runs.assess import Assessment
 
-__all__ = ["assessment_report"]
+__all__ = ["XML", "assessment_report", "provenance_rows", "template"]
 
 XML = '<?xml version="1.0" encoding="UTF-8"?>\n'
 
@@ -39,7 +39,7 @@ def assessment_report(result: Assessment) -> tuple[str, dict[str, str]]:
     drawings = assessment_figures(result)
     scenario, verdict = result.scenario, result.verdict
     compared = "fit" in verdict
-    page = _template().render(
+    page = template("assessment.html.j2").render(
         name=scenario.name,
         note=scenario.note,
         verdict=verdict,
@@ -59,13 +59,14 @@ def assessment_report(result: Assessment) -> tuple[str, dict[str, str]]:
         noise_check=sentences.noise_check(verdict),
         local_level=sentences.local_level(verdict),
         audit=audit_rows(verdict),
-        provenance=_provenance(verdict["provenance"]),
+        provenance=provenance_rows(verdict["provenance"]),
     )
     return page, {name: XML + drawing.svg for name, drawing in drawings.items()}
 
 
 @cache
-def _template() -> Template:
+def template(name: str) -> Template:
+    """A page to be filled: strict about names, safe with any text."""
     from jinja2 import Environment, PackageLoader, StrictUndefined
 
     environment = Environment(
@@ -75,7 +76,7 @@ def _template() -> Template:
         trim_blocks=True,
         lstrip_blocks=True,
     )
-    return environment.get_template("assessment.html.j2")
+    return environment.get_template(name)
 
 
 def _missing(result: Assessment) -> dict[str, str]:
@@ -94,8 +95,10 @@ def _missing(result: Assessment) -> dict[str, str]:
     }
 
 
-def _provenance(facts: dict[str, Any]) -> list[tuple[str, str]]:
-    rows = [("scenario, SHA-256", str(facts["scenario_sha256"])), ("seed", str(facts["seed"]))]
+def provenance_rows(facts: dict[str, Any]) -> list[tuple[str, str]]:
+    """What makes a run repeatable, as label and value."""
+    rows = [("scenario, SHA-256", str(facts["scenario_sha256"]))]
+    rows += [("seed", str(facts["seed"]))] if "seed" in facts else []
     rows += [(f"version of {name}", str(version)) for name, version in facts["versions"].items()]
     labels = {"file": "file", "variable": "variable", "sha256": "SHA-256", "nan_count": "empty nodes"}
     known = facts.get("map", {})

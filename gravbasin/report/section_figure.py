@@ -30,7 +30,7 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-__all__ = ["section_figure"]
+__all__ = ["UNIT_LOOK", "section_figure"]
 
 KM = 1000.0
 LEFT, WIDTH, BAR = 0.75, 6.25, 0.14
@@ -39,7 +39,7 @@ LEFT, WIDTH, BAR = 0.75, 6.25, 0.14
 EXAGGERATIONS = np.array([0.5, 1, 1.5, 2, 3, 4, 5, 6, 8, 10, 15, 20])
 PANEL_HEIGHT = 1.9
 
-_LOOK = {
+UNIT_LOOK = {
     "intact target": ("#f4f2ee", ""),
     "cover": ("#e9e0c9", ""),
     "sediment": ("#d2c08d", "---"),
@@ -53,17 +53,19 @@ _LOOK = {
 """Colour and hatch of every unit: different in lightness or in hatch, so that they differ in grey."""
 
 
-def section_figure(section: xr.Dataset, profile: xr.Dataset, *, rim_radius_m: float) -> Figure:
+def section_figure(section: xr.Dataset, profile: xr.Dataset, *, rim_radius_m: float, porosity: bool = False) -> Figure:
     """Cross-section through the axis with the anomaly it makes.
 
     Parameters
     ----------
     section : Dataset (depth, radius)
-        density_contrast (kg/m³) and unit, with depth_edges and radius_edges (m).
+        density_contrast (kg/m³), unit and porosity, with depth_edges and radius_edges (m).
     profile : Dataset
-        modelled, modelled_low, modelled_high (radius), mGal.
+        modelled (radius), mGal; also modelled_low, modelled_high where there is a band.
     rim_radius_m : float
         Where the rim was.
+    porosity : bool
+        Whether to draw the porosity as well.
     """
     radius = section.radius_edges.values / KM
     edges = np.concatenate([-radius[:0:-1], radius])
@@ -71,32 +73,41 @@ def section_figure(section: xr.Dataset, profile: xr.Dataset, *, rim_radius_m: fl
     deepest = _deepest_shown(section)
     sky = 0.02 * deepest
     exaggeration, height = _exaggeration(deepest + sky, span=2 * radius[-1])
-    total = 2.35 + 2 * height + 1.1
+    stated = "no vertical exaggeration" if exaggeration == 1 else f"vertical exaggeration {exaggeration:g}"
+    titles = {"contrast": f"Density contrast to the intact column ({stated})"}
+    titles |= {"porosity": "Porosity of rock, breccia and suevite"} if porosity else {}
+    titles |= {"units": "Units"}
+    total = 2.0 + len(titles) * (height + 0.35) + 0.75
     figure = blank_figure(total)
 
     def panel(top: float, tall: float, left: float = LEFT, wide: float = WIDTH) -> Axes:
         return figure.add_axes((left / 8, 1 - (top + tall) / total, wide / 8, tall / total))
 
-    above, contrast, units = panel(0.3, 1.35), panel(2.0, height), panel(2.35 + height, height)
+    above = panel(0.3, 1.35)
     _anomaly(above, profile, radius[-1])
-    _contrast(contrast, panel(2.0, height, LEFT + WIDTH + 0.12, BAR), section, edges, depth)
-    patches = _units(units, section, edges, depth, deepest)
-    _legend(figure, patches, 0.4 / total)
+    band = ", with the 5–95 % band of its scatter" if "modelled_low" in profile else ""
+    tidy(above, y="anomaly (mGal)", title=f"Modelled anomaly{band}")
+    cuts = {}
+    for number, (name, title) in enumerate(titles.items()):
+        top = 2.0 + number * (height + 0.35)
+        cuts[name] = panel(top, height)
+        bar = panel(top, height, LEFT + WIDTH + 0.12, BAR) if name != "units" else None
+        if name == "contrast" and bar:
+            _contrast(cuts[name], bar, section, edges, depth)
+        elif bar:
+            _porosity(cuts[name], bar, section, edges, depth)
+        else:
+            _legend(figure, _units(cuts[name], section, edges, depth, deepest), 0.4 / total)
+        tidy(cuts[name], y="depth (km)", title=title, x="distance from the axis (km)" if name == "units" else "")
+        cuts[name].axhline(0.0, color=INK, linewidth=1.4, zorder=4)
+        cuts[name].set_ylim(deepest, -sky)
     bouguer_note(figure, LEFT / 8)
-    stated = "no vertical exaggeration" if exaggeration == 1 else f"vertical exaggeration {exaggeration:g}"
-    tidy(above, y="anomaly (mGal)", title="Modelled anomaly, with the 5–95 % band of its scatter")
-    tidy(contrast, y="depth (km)", title=f"Density contrast to the intact column ({stated})")
-    tidy(units, y="depth (km)", x="distance from the axis (km)", title="Units")
-    for axes in (contrast, units):
-        axes.axhline(0.0, color=INK, linewidth=1.4, zorder=4)
-        axes.set_ylim(deepest, -sky)
-    for axes in (above, contrast, units):
+    for axes in (above, *cuts.values()):
         axes.set_xlim(-radius[-1], radius[-1])
         mark_rim(axes, -rim_radius_m / KM, label="none")
         mark_rim(axes, rim_radius_m / KM, label="above" if axes is above else "none")
-    for axes in (above, contrast):
-        axes.tick_params(labelbottom=False)
-    contrast.annotate(
+        axes.tick_params(labelbottom=axes is cuts["units"])
+    cuts["contrast"].annotate(
         "today's ground", (1.0, 1.0), xycoords="axes fraction", ha="right", va="bottom", fontsize=SMALL, color=INK
     )
     return figure
@@ -131,7 +142,8 @@ def _anomaly(axes: Axes, profile: xr.Dataset, reach: float) -> None:
         return np.concatenate([values[:0:-1], values])
 
     axes.axhline(0.0, color=FAINT, linewidth=0.8)
-    axes.fill_between(x, both("modelled_low"), both("modelled_high"), color=BAND, linewidth=0)
+    if "modelled_low" in profile:
+        axes.fill_between(x, both("modelled_low"), both("modelled_high"), color=BAND, linewidth=0)
     axes.plot(x, both("modelled"), color=MODEL, linewidth=1.6)
 
 
@@ -156,6 +168,23 @@ def _contrast(axes: Axes, bar: Axes, section: xr.Dataset, edges: Array, depth: A
     bar.yaxis.get_offset_text().set_visible(False)
 
 
+def _porosity(axes: Axes, bar: Axes, section: xr.Dataset, edges: Array, depth: Array) -> None:
+    """Per cent, darker where more; lines at levels marked on the bar, so that numbers can be read without colour."""
+    values = 100 * _mirrored(section.porosity.values)
+    limit = round_limit(values)
+    mesh = axes.pcolormesh(edges, depth, values, cmap=cm.davos_r, vmin=0.0, vmax=1.3 * limit, rasterized=True)
+    middle, down = 0.5 * (edges[1:] + edges[:-1]), 0.5 * (depth[1:] + depth[:-1])
+    levels = [share * limit for share in (0.1, 0.3, 0.5) if values.min() < share * limit < values.max()]
+    if levels:
+        axes.contour(middle, down, values, levels=levels, colors=INK, linewidths=0.6)
+    for level in levels:
+        bar.axhline(level, color=INK, linewidth=0.9)
+    axes.figure.colorbar(mesh, cax=bar)
+    bar.set_ylim(0.0, limit)
+    bar.tick_params(labelsize=SMALL, width=0.7, length=3)
+    bar.set_ylabel("%", fontsize=TEXT)
+
+
 def _units(axes: Axes, section: xr.Dataset, edges: Array, depth: Array, deepest: float) -> list[Patch]:
     """Draw the units, and return what their legend shows."""
     codes = _mirrored(section.unit.values)
@@ -164,14 +193,14 @@ def _units(axes: Axes, section: xr.Dataset, edges: Array, depth: Array, deepest:
         edges,
         depth,
         codes,
-        cmap=ListedColormap([_LOOK[name][0] for name in UNITS]),
+        cmap=ListedColormap([UNIT_LOOK[name][0] for name in UNITS]),
         vmin=-0.5,
         vmax=len(UNITS) - 0.5,
         rasterized=True,
     )
     patches = []
     for code in np.unique(codes[depth[:-1] < deepest]):
-        colour, hatch = _LOOK[UNITS[code]]
+        colour, hatch = UNIT_LOOK[UNITS[code]]
         inside = (codes == code).astype(float)
         if 0 < inside.mean() < 1:
             if hatch:

@@ -2,13 +2,13 @@
 
 from __future__ import annotations
 
-import dataclasses
 import math
 from collections.abc import Iterable, Mapping
 from typing import Any, NamedTuple
 
 from gravbasin.crater import CraterDimensions, Rival
 from gravbasin.report.words import given, number, percent, plus_minus, probability, signed
+from gravbasin.runs.section_run import dimension_table
 
 __all__ = ["Row", "audit_rows", "candidate_rows", "dimension_rows", "key_numbers", "noise_rows", "rival_rows"]
 
@@ -227,30 +227,22 @@ class DimensionRow(NamedTuple):
     unit: str
     origin: str
     source: str
+    note: str
 
 
 def dimension_rows(dimensions: CraterDimensions) -> list[DimensionRow]:
     """Every dimension with where it comes from: given, law, drawn, or derived from the others."""
-    rows = []
-    for field in dataclasses.fields(dimensions):
-        name, value = field.name, getattr(dimensions, field.name)
-        if not isinstance(value, float):
-            continue
-        fallback = ("given", "scenario") if name == "rim_diameter_km" else ("derived", "from the others")
-        origin = dimensions.origin.get(name, fallback[0])
-        source = dimensions.source.get(name, fallback[1])
-        remarks = [source, dimensions.validity[name]] if name in dimensions.validity else [source]
-        stem, _, unit = name.rpartition("_")
-        rows.append(
-            DimensionRow(
-                _DIMENSIONS.get(name, stem.replace("_", " ")),
-                given(value) if origin == "given" else number(value),
-                {"km": "km", "km3": "km³"}.get(unit, unit),
-                origin,
-                "; ".join(remarks),
-            )
+    return [
+        DimensionRow(
+            _DIMENSIONS.get(row["name"], row["name"].rpartition("_")[0].replace("_", " ")),
+            given(row["value"]) if row["origin"] == "given" else number(row["value"]),
+            {"km3": "km³"}.get(row["unit"], row["unit"]),
+            row["origin"],
+            row["source"],
+            row["validity"],
         )
-    return rows
+        for row in dimension_table(dimensions)
+    ]
 
 
 def noise_rows(verdict: Verdict) -> list[Row]:
