@@ -191,7 +191,7 @@ def _spokes(site: Site, spacing: float, spokes: int) -> Array:
 
 
 def _along(roads: tuple[Array, ...], spacing: float) -> Array:
-    """Stations along lines, first half a step from each end; where lines meet, the first line's station stays."""
+    """Stations along lines, the left-over shared by both ends; where lines meet, the first one keeps its station."""
     found: list[Array] = []
     for line in roads:
         length = np.concatenate([[0.0], np.cumsum(np.hypot(*np.diff(line, axis=0).T))])
