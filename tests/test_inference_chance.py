@@ -30,7 +30,7 @@ def field():
 
 def _odds(stencil, data):
     templates = np.outer(stencil.response @ PROFILE, AMPLITUDES)
-    return log_odds(stencil.likelihood, templates, np.zeros(AMPLITUDES.size), data, Level())
+    return log_odds(stencil.likelihood, templates, data, Level())
 
 
 def test_ring_means_about_nodes_match_those_of_the_map(stencil, field):

@@ -11,7 +11,6 @@ from gravbasin.inference.evidence import (
     evidence,
     fit_level,
     log_likelihood,
-    merged,
     predictive_fit,
     weighted_quantile,
 )
@@ -26,9 +25,8 @@ FREE = ring_likelihood(COVARIANCE, np.zeros((N, 1)))  # no regional
 NEARLY_GAUSSIAN = Level(1.0, 1e7)
 
 
-def _bank(amplitude, name="bodies", log_weight=None):
-    weight = np.zeros(amplitude.size) if log_weight is None else log_weight
-    return Bank(name, {"amplitude": amplitude}, X, amplitude[:, None] * SHAPE, weight)
+def _bank(amplitude):
+    return Bank("bodies", {"amplitude": amplitude}, X, amplitude[:, None] * SHAPE, np.zeros((amplitude.size, 1)))
 
 
 def test_one_model_is_a_multivariate_students_t():
@@ -58,38 +56,17 @@ def test_a_regional_in_the_data_does_not_move_the_odds():
     regional = np.column_stack([np.ones(N), X**2 / 100])
     likelihood = ring_likelihood(COVARIANCE, regional)
     templates, data = np.outer(SHAPE, [2.0, 6.0, 9.0]), rng.standard_normal((N, 3))
-    plain = log_odds(likelihood, templates, np.zeros(3), data, Level())
-    shifted = log_odds(likelihood, templates, np.zeros(3), data + regional @ [[70.0], [-9.0]], Level())
+    plain = log_odds(likelihood, templates, data, Level())
+    shifted = log_odds(likelihood, templates, data + regional @ [[70.0], [-9.0]], Level())
     np.testing.assert_allclose(plain, shifted, atol=1e-8)
 
 
 def test_odds_in_blocks_are_the_odds_at_once(monkeypatch):
     rng = np.random.default_rng(4)
     templates, data = rng.standard_normal((N, 40)), rng.standard_normal((N, 30))
-    whole = log_odds(FREE, templates, np.zeros(40), data, Level())
+    whole = log_odds(FREE, templates, data, Level())
     monkeypatch.setattr("gravbasin.inference.odds.BLOCK", 90)
-    np.testing.assert_allclose(log_odds(FREE, templates, np.zeros(40), data, Level()), whole, rtol=1e-13)
-
-
-def test_refined_banks_give_the_same_evidence():
-    """A bank refined where the posterior lies estimates the same integral, with a smaller error."""
-    rng = np.random.default_rng(5)
-    whole = Range(0.0, 40.0)
-    first = _bank(whole.draw(rng, 2000))
-    data = 7.0 * SHAPE + 0.2 * np.linalg.cholesky(COVARIANCE) @ rng.standard_normal(N)
-    inner = Range(4.0, 12.0)
-    second = _bank(inner.draw(rng, 2000), log_weight=np.full(2000, np.log(whole.share(inner))))
-    both = merged(first, second, {"amplitude": (4.0, 12.0)})
-    tight = ring_likelihood(0.04 * COVARIANCE, np.zeros((N, 1)))
-    rough = evidence([tight], first.profiles.T, data, first, NEARLY_GAUSSIAN)
-    fine = evidence([tight], both.profiles.T, data, both, NEARLY_GAUSSIAN)
-    grid = np.linspace(0, 40, 40001)
-    logs = log_likelihood(tight, np.outer(SHAPE, grid), data[:, None], NEARLY_GAUSSIAN)[0]
-    exact = np.log(np.trapezoid(np.exp(logs - logs.max()), grid) / 40) + logs.max()
-    assert abs(fine.log_evidence - exact) < 4 * fine.standard_error
-    assert abs(rough.log_evidence - exact) < 4 * rough.standard_error
-    assert fine.standard_error < 0.6 * rough.standard_error
-    assert fine.effective_size > 2 * rough.effective_size
+    np.testing.assert_allclose(log_odds(FREE, templates, data, Level()), whole, rtol=1e-13)
 
 
 def test_ranks_of_the_truth_are_uniform():

@@ -9,6 +9,8 @@ from typing import Literal
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from gravbasin.crater.priors import Draws
+
 __all__ = ["FLUID_DENSITY", "Damage", "Sealing", "bulking", "sealing"]
 
 Array = NDArray[np.float64]
@@ -34,7 +36,7 @@ class Sealing:
     low: float
     high: float
 
-    def draw(self, rng: np.random.Generator | None) -> float:
+    def draw(self, rng: Draws | None) -> float:
         """The expected value, or with `rng` one from a log-uniform range."""
         if rng is None:
             return self.expected

@@ -7,8 +7,7 @@ import math
 from collections.abc import Callable, Collection, Mapping
 from typing import Literal, get_args
 
-import numpy as np
-
+from gravbasin.crater.priors import Draws
 from gravbasin.errors import InputError
 
 __all__ = [
@@ -207,7 +206,7 @@ def crater_dimensions(
     uplift_law: str = "stratigraphic",
     melt_coefficient: float = 2e-4,
     given: Mapping[str, float | None] | None = None,
-    rng: np.random.Generator | None = None,
+    rng: Draws | None = None,
 ) -> CraterDimensions:
     """Dimensions of a crater from its final rim diameter.
 
@@ -267,7 +266,7 @@ def crater_dimensions(
 class _Settled:
     """Dimensions settled one after the other: given, else by law, else drawn; each within its physical limits."""
 
-    def __init__(self, rim: float, given: Mapping[str, float], rng: np.random.Generator | None) -> None:
+    def __init__(self, rim: float, given: Mapping[str, float], rng: Draws | None) -> None:
         self.value: dict[str, float] = {"rim_diameter_km": rim}
         self.origin: dict[str, Origin] = {}
         self.source: dict[str, str] = {}

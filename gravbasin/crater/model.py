@@ -20,6 +20,7 @@ from gravbasin.crater.displacement import Displacement
 from gravbasin.crater.fill import LITHOLOGIES, Fill, lithified_density
 from gravbasin.crater.flexure import Plate, Rebound
 from gravbasin.crater.history import Burial, Erosion, Ground, after
+from gravbasin.crater.priors import Draws
 from gravbasin.errors import InputError
 from gravbasin.scenario import Scenario
 
@@ -91,7 +92,7 @@ def ground_of(scenario: Scenario) -> Ground:
     return after(episodes, cover_density=history.cover_density_kg_m3)
 
 
-def crater_model(scenario: Scenario, rng: np.random.Generator | None = None) -> CraterModel:
+def crater_model(scenario: Scenario, rng: Draws | None = None) -> CraterModel:
     """The structure a scenario describes, or with `rng` one draw from the scatter of its laws and contrasts.
 
     Parameters
@@ -134,7 +135,7 @@ def crater_model(scenario: Scenario, rng: np.random.Generator | None = None) -> 
     return CraterModel(dims, column, displacement, damage, fill, ground, _rebound(scenario, column, ground))
 
 
-def _contrast_factors(rng: np.random.Generator | None) -> dict[str, float]:
+def _contrast_factors(rng: Draws | None) -> dict[str, float]:
     if rng is None:
         return dict.fromkeys(CONTRAST_SCATTER, 1.0)
     return {name: math.exp(s * rng.standard_normal()) for name, s in CONTRAST_SCATTER.items()}
@@ -172,7 +173,7 @@ def _fill(
     dims: CraterDimensions,
     column: Column,
     factor: dict[str, float],
-    rng: np.random.Generator | None,
+    rng: Draws | None,
 ) -> Fill:
     given, crater = scenario.fill, scenario.crater
     left = sealing(crater.setting, crater.age_myr, sealed=SEALED_BRECCIA).draw(rng)
@@ -271,9 +272,7 @@ def _displacement(dims: CraterDimensions, column: Column, floor: float) -> Displ
     )
 
 
-def _damage(
-    scenario: Scenario, dims: CraterDimensions, factor: dict[str, float], rng: np.random.Generator | None
-) -> Damage:
+def _damage(scenario: Scenario, dims: CraterDimensions, factor: dict[str, float], rng: Draws | None) -> Damage:
     given, crater = scenario.damage, scenario.crater
     left = sealing(crater.setting, crater.age_myr, sealed=SEALED_FRACTURES).draw(rng)
     opened = 1.0 if rng is None else math.exp(given.porosity_scatter * rng.standard_normal())

@@ -3,13 +3,24 @@
 from __future__ import annotations
 
 import dataclasses
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-__all__ = ["Range"]
+__all__ = ["Draws", "Range"]
 
 Array = NDArray[np.float64]
+
+
+class Draws(Protocol):
+    """Where scatter is drawn from: a numpy Generator, or a sampler that hands out its own numbers."""
+
+    def standard_normal(self) -> float:
+        """One standard normal number."""
+
+    def uniform(self, low: float, high: float) -> float:
+        """One number between two bounds."""
 
 
 @dataclasses.dataclass(frozen=True)
@@ -23,10 +34,15 @@ class Range:
     def _scaled(self, value: ArrayLike) -> Array:
         return np.log(value) if self.logarithmic else np.asarray(value, dtype=float)
 
+    def at(self, share: ArrayLike) -> Array:
+        """Quantile of the prior: the value below which this share of it lies."""
+        low, high = self._scaled(self.low), self._scaled(self.high)
+        scaled = low + (high - low) * np.asarray(share, dtype=float)
+        return np.exp(scaled) if self.logarithmic else scaled
+
     def draw(self, rng: np.random.Generator, n: int) -> Array:
         """Independent draws, (n,)."""
-        drawn = rng.uniform(self._scaled(self.low), self._scaled(self.high), n)
-        return np.exp(drawn) if self.logarithmic else drawn
+        return self.at(rng.uniform(size=n))
 
     def share(self, inner: Range) -> float:
         """Prior probability of a narrower range of the same kind."""

@@ -78,9 +78,12 @@ class Rival:
         """Contrast of every cell, (depth, radius) kg/m³; exact mass in depth, walls smoothed over a quarter ring."""
         return shell_contrast(SHAPES[self.shape].shells(parameters, subring_radius(mesh)), mesh)
 
-    def draw(
-        self, main: Mapping[str, float], mesh: Mesh, rng: np.random.Generator
-    ) -> tuple[Array, Mapping[str, float]]:
+    @property
+    def extras(self) -> int:
+        """A rival draws nothing beyond its main parameters."""
+        return 0
+
+    def draw(self, main: Mapping[str, float], mesh: Mesh, rng: object) -> tuple[Array, Mapping[str, float]]:
         """Contrast of the body with these parameters, and no further results: the form banks of models ask for."""
         return self.contrast(main, mesh), {}
 

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
+from functools import cached_property
 from typing import Protocol
 
 import numpy as np
@@ -12,12 +13,13 @@ from scipy.optimize import brentq
 
 from gravbasin.crater import CraterModel, Mesh, contrast, crater_model, shared_mesh
 from gravbasin.crater.model import ground_of
-from gravbasin.crater.priors import Range
+from gravbasin.crater.priors import Draws, Range
 from gravbasin.errors import CannotFinish
 from gravbasin.forward.rings import ring_table
+from gravbasin.inference.latent import LatentStream, main_parameters
 from gravbasin.scenario import Event, Scenario
 
-__all__ = ["Bank", "Family", "ImpactFamily", "build_bank"]
+__all__ = ["Bank", "Family", "ImpactFamily", "bank_of", "build_bank"]
 
 Array = NDArray[np.float64]
 KM = 1000.0
@@ -40,12 +42,14 @@ class Family(Protocol):
     def ranges(self) -> Mapping[str, Range]:
         """Prior of every main parameter, by name with its unit."""
 
+    @property
+    def extras(self) -> int:
+        """How many standard normals a model draws beyond its main parameters."""
+
     def mesh(self, ranges: Mapping[str, Range], /) -> Mesh:
         """Cells that hold every model within the ranges."""
 
-    def draw(
-        self, main: Mapping[str, float], mesh: Mesh, rng: np.random.Generator
-    ) -> tuple[Array, Mapping[str, float]]:
+    def draw(self, main: Mapping[str, float], mesh: Mesh, rng: Draws) -> tuple[Array, Mapping[str, float]]:
         """Contrast (depth, radius), kg/m³, of one model with these main parameters, and further named results."""
 
 
@@ -63,20 +67,20 @@ class Bank:
         Radii of the profiles.
     profiles : (n_model, n_radius) array, mGal
         Anomalies.
-    log_weight : (n_model,) array
-        Logarithm of prior over proposal density; zero when drawn from the prior.
+    latent : (n_model, n_latent) array
+        Standard normals behind every model: its main parameters, then the rest of its scatter.
     """
 
     name: str
     parameters: Mapping[str, Array]
     radius: Array
     profiles: Array
-    log_weight: Array
+    latent: Array
 
     @property
     def size(self) -> int:
         """Number of models."""
-        return int(self.log_weight.size)
+        return int(self.profiles.shape[0])
 
 
 @dataclasses.dataclass(frozen=True)
@@ -139,9 +143,14 @@ class ImpactFamily:
         ]
         return _deeper(shared_mesh(corners, layers=BANK_LAYERS, rings=BANK_RINGS), 1.3)
 
-    def draw(
-        self, main: Mapping[str, float], mesh: Mesh, rng: np.random.Generator
-    ) -> tuple[Array, Mapping[str, float]]:
+    @cached_property
+    def extras(self) -> int:
+        """How many standard normals the scatter of one structure takes."""
+        stream = LatentStream(np.zeros(0))
+        crater_model(self.scenario, stream)
+        return stream.used
+
+    def draw(self, main: Mapping[str, float], mesh: Mesh, rng: Draws) -> tuple[Array, Mapping[str, float]]:
         """One structure with its laws and contrasts drawn."""
         model = crater_model(self.varied(**main), rng)
         return contrast(model, mesh), _results(model)
@@ -167,9 +176,8 @@ def build_bank(
     height: float,
     rng: np.random.Generator,
     ranges: Mapping[str, Range] | None = None,
-    progress: Callable[[int, int], None] | None = None,
 ) -> Bank:
-    """Draw models of a family and forward them.
+    """Draw models from a family's prior, or from narrower ranges, and forward them.
 
     Parameters
     ----------
@@ -184,9 +192,7 @@ def build_bank(
     rng : numpy Generator
         Source of randomness.
     ranges : mapping, optional
-        Narrower ranges to draw from; weights make up for it (see `Bank.log_weight`).
-    progress : callable, optional
-        Called with (done, models) after each batch.
+        Where to look instead of the family's prior; such a bank is no sample of the prior.
 
     Returns
     -------
@@ -200,25 +206,30 @@ def build_bank(
     """
     if 8 * models * radius.size > 2**31:
         raise CannotFinish(f"a bank of {models} models needs more than 2 GiB; lower prior.models")
-    wanted = dict(ranges or family.ranges)
-    mesh = family.mesh(wanted)
-    main = {name: r.draw(rng, models) for name, r in wanted.items()}
+    latent = rng.standard_normal((models, len(family.ranges) + family.extras))
+    return bank_of(family, latent, radius, height=height, ranges=ranges)
+
+
+def bank_of(
+    family: Family, latent: Array, radius: Array, *, height: float, ranges: Mapping[str, Range] | None = None
+) -> Bank:
+    """The models behind given latent vectors, (n_model, n_latent) standard normals, forwarded in batches."""
+    wanted = ranges or family.ranges
+    mesh, main = family.mesh(wanted), main_parameters(latent, wanted)
     table = ring_table(radius, mesh.radius_edges, mesh.depth_edges, height_m=height)
     volume = np.outer(np.diff(mesh.depth_edges), np.pi * np.diff(mesh.radius_edges**2)).ravel()
-    profiles = np.empty((models, radius.size))
+    models = latent.shape[0]
+    profiles, mass = np.empty((models, radius.size)), np.empty(models)
     results: dict[str, list[float]] = {}
-    mass: list[Array] = []
     for start in range(0, models, BATCH):
-        stop = min(start + BATCH, models)
-        batch = np.empty((stop - start, mesh.depth.size, mesh.radius.size))
-        for i in range(start, stop):
-            batch[i - start], extra = family.draw({k: float(v[i]) for k, v in main.items()}, mesh, rng)
+        rows = range(start, min(start + BATCH, models))
+        batch = np.empty((len(rows), mesh.depth.size, mesh.radius.size))
+        for i in rows:
+            stream = LatentStream(latent[i, len(main) :])
+            batch[i - start], extra = family.draw({k: float(v[i]) for k, v in main.items()}, mesh, stream)
             for key, value in extra.items():
                 results.setdefault(key, []).append(value)
-        profiles[start:stop] = table.anomaly(batch)
-        mass.append(batch.reshape(stop - start, -1) @ volume)
-        if progress is not None:
-            progress(stop, models)
-    share = float(np.prod([family.ranges[name].share(r) for name, r in wanted.items()]))
-    parameters = {**main, **{k: np.array(v) for k, v in results.items()}, "excess_mass_kg": np.concatenate(mass)}
-    return Bank(family.name, parameters, radius, profiles, np.full(models, np.log(share)))
+        profiles[rows.start : rows.stop] = table.anomaly(batch)
+        mass[rows.start : rows.stop] = batch.reshape(len(rows), -1) @ volume
+    parameters = {**main, **{k: np.array(v) for k, v in results.items()}, "excess_mass_kg": mass}
+    return Bank(family.name, parameters, radius, profiles, latent)

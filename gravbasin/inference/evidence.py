@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,7 +19,7 @@ __all__ = [
     "evidence",
     "fit_level",
     "log_likelihood",
-    "merged",
+    "log_likelihood_of_models",
     "predictive_fit",
     "weighted_quantile",
 ]
@@ -163,28 +163,33 @@ class Posterior:
         return float(covariance[0, 1] / (spread[0] * spread[1])) if spread.all() else float("nan")
 
 
-def evidence(
-    likelihoods: Sequence[RingLikelihood], templates: Array, data: Array, bank: Bank, level: Level
-) -> Posterior:
-    """Evidence and posterior of one bank for one place, averaged over plausible noise models.
+def log_likelihood_of_models(
+    likelihoods: Sequence[RingLikelihood], templates: Array, data: Array, level: Level
+) -> Array:
+    """Log-likelihood of models, (n_model,), averaged over equally plausible noise models.
 
     Parameters
     ----------
     likelihoods : sequence of RingLikelihood
-        Under plausible noise models, equally weighted.
+        Under plausible noise models.
     templates : (n_ring, n_model) array, mGal
-        Ring means of the bank's models.
+        Ring means of the models.
     data : (n_ring,) array, mGal
         Observed ring means.
-    bank : Bank
-        The models and their weights.
     level : Level
         Prior of the local noise level.
     """
     logs = np.stack([log_likelihood(each, templates, data[:, None], level)[0] for each in likelihoods])
-    log_models = special.logsumexp(logs, axis=0) - np.log(len(likelihoods)) + bank.log_weight
-    total = special.logsumexp(log_models)
-    weights = np.exp(log_models - total)
+    return np.asarray(special.logsumexp(logs, axis=0) - np.log(len(likelihoods)))
+
+
+def evidence(
+    likelihoods: Sequence[RingLikelihood], templates: Array, data: Array, bank: Bank, level: Level
+) -> Posterior:
+    """Evidence and posterior from a bank drawn from the prior: arguments as in `log_likelihood_of_models`."""
+    logs = log_likelihood_of_models(likelihoods, templates, data, level)
+    total = special.logsumexp(logs)
+    weights = np.exp(logs - total)
     size = 1.0 / float(np.sum(weights**2))
     error = float(np.sqrt(max(1.0 / size - 1.0 / weights.size, 0.0)))
     return Posterior(bank.name, float(total - np.log(weights.size)), error, size, weights, bank)
@@ -227,20 +232,3 @@ def weighted_quantile(values: Array, weights: Array, probabilities: Sequence[flo
     cumulative = np.cumsum(weights[order])
     cumulative -= 0.5 * weights[order]
     return np.asarray(np.interp(probabilities, cumulative / np.sum(weights), values[order]))
-
-
-def merged(first: Bank, second: Bank, inside: Mapping[str, tuple[float, float]]) -> Bank:
-    """A prior bank and one drawn within `inside`, as one sample of the prior: each stands for its own region."""
-    keep = np.ones(first.size, dtype=bool)
-    for name, (low, high) in inside.items():
-        keep &= (first.parameters[name] >= low) & (first.parameters[name] <= high)
-    outside = ~keep
-    total = int(outside.sum()) + second.size
-    # Mean over the merged sample must equal P(in) mean_in + P(out) mean_out.
-    weight_out = first.log_weight[outside] + np.log(total / first.size)
-    weight_in = second.log_weight + np.log(total / second.size)
-    parameters = {
-        name: np.concatenate([values[outside], second.parameters[name]]) for name, values in first.parameters.items()
-    }
-    profiles = np.concatenate([first.profiles[outside], second.profiles])
-    return Bank(first.name, parameters, first.radius, profiles, np.concatenate([weight_out, weight_in]))

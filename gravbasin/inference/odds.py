@@ -17,7 +17,7 @@ BLOCK = 4_000_000
 """Likelihoods held at a time: 32 MB."""
 
 
-def log_odds(likelihood: RingLikelihood, templates: Array, log_weight: Array, data: Array, level: Level) -> Array:
+def log_odds(likelihood: RingLikelihood, templates: Array, data: Array, level: Level) -> Array:
     """Logarithm of evidence of a bank over that of regional noise alone, at every place.
 
     Parameters
@@ -26,8 +26,6 @@ def log_odds(likelihood: RingLikelihood, templates: Array, log_weight: Array, da
         Of the ring means under the noise.
     templates : (n_ring, n_model) array, mGal
         Ring means of the bank's models.
-    log_weight : (n_model,) array
-        Of the bank.
     data : (n_ring, n_place) array, mGal
         Ring means about the places.
     level : Level
@@ -47,7 +45,6 @@ def log_odds(likelihood: RingLikelihood, templates: Array, log_weight: Array, da
     for start in range(0, data.shape[1], step):
         block = data[:, start : start + step]
         logs = log_likelihood(likelihood, templates, block, level)
-        logs += log_weight
         alone = log_likelihood(likelihood, nothing, block, level)[:, 0]
         result[start : start + step] = _log_mean_exp(logs) - alone
     return result

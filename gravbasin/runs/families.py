@@ -60,7 +60,7 @@ def compare_families(
         key = _Keyed(rival, repr(rival))
         families.append((rival, _bank(key, radius.tobytes(), models, height, seed, 100 + number)))
     found = [evidence(likelihoods, response @ each.profiles.T, data, each, level) for _, each in families]
-    nothing = Bank(NOISE_ALONE, {}, radius, np.zeros((1, radius.size)), np.zeros(1))
+    nothing = Bank(NOISE_ALONE, {}, radius, np.zeros((1, radius.size)), np.zeros((1, 0)))
     found.append(evidence(likelihoods, np.zeros((data.size, 1)), data, nothing, level))
     best = max(p.log_evidence for p in found)
     rng = np.random.default_rng([scenario.seed, 5])

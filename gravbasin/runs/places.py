@@ -33,8 +33,8 @@ class Places:
     ----------
     stencil : Stencil
         Rings about a node.
-    templates, log_weight : (n_ring, n_model), (n_model,) arrays
-        Ring means of the impact bank through the stencil, mGal, and the bank's weights.
+    templates : (n_ring, n_model) array, mGal
+        Ring means of the impact bank through the stencil.
     level : Level
         How the noise level varies from place to place.
     chance : Chance or None
@@ -47,7 +47,6 @@ class Places:
 
     stencil: Stencil
     templates: Array
-    log_weight: Array
     level: Level
     chance: Chance | None
     circularity: Circularity | None
@@ -55,7 +54,7 @@ class Places:
 
     def log_odds(self, data: Array) -> Array:
         """The statistic for ring means about nodes, (n_ring, n_place) mGal."""
-        return log_odds(self.stencil.likelihood, self.templates, self.log_weight, data, self.level)
+        return log_odds(self.stencil.likelihood, self.templates, data, self.level)
 
 
 def places_of(
@@ -103,9 +102,9 @@ def places_of(
     misfits = np.sum(stencil.likelihood.whiten(data[:, elsewhere]) ** 2, axis=0)
     level = fit_level(misfits, stencil.likelihood.dof, independent)
     templates = stencil.response @ bank.profiles.T
-    found = log_odds(stencil.likelihood, templates, bank.log_weight, data, level)
-    places = Places(stencil, templates, bank.log_weight, level, None, None, _odds_map(observed, rows, columns, found))
-    here = log_odds(likelihood, response @ bank.profiles.T, bank.log_weight, rings.mean[:, None], level)
+    found = log_odds(stencil.likelihood, templates, data, level)
+    places = Places(stencil, templates, level, None, None, _odds_map(observed, rows, columns, found))
+    here = log_odds(likelihood, response @ bank.profiles.T, rings.mean[:, None], level)
     chance = None
     if centres:
         chance = chance_of(

@@ -52,7 +52,7 @@ def search_map(
     rows, columns = complete_nodes(observed, places.stencil.shape)
     east, north = observed.easting.values[columns], observed.northing.values[rows]
     values = places.odds.values[rows, columns]
-    few = dataclasses.replace(places, templates=places.templates[:, :MODELS], log_weight=places.log_weight[:MODELS])
+    few = dataclasses.replace(places, templates=places.templates[:, :MODELS])
     best = _largest_by_map(observed, few, noise, (rows, columns), seed)
     found: list[Candidate] = []
     free = np.ones(values.size, dtype=bool)
