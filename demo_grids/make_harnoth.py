@@ -1,7 +1,7 @@
 """Make demo_grids/harnoth.nc: an invented gravity map over the invented Harnoth ring on the invented Talvira craton.
 
-Nothing here was measured. The hidden structure differs in detail from the one configs/demo.toml assesses (another
-diameter, depth of erosion, other contrasts), a dense body lies north-east of it, and correlated geological noise and a
+Nothing here was measured. The hidden structure differs in detail from the one configs/demo.toml assesses (a thicker
+melt sheet, less erosion, other contrasts), a dense body lies north-east of it, and correlated geological noise and a
 regional gradient lie over both. The grid is not square.
 
 Run from the project's folder:  python demo_grids/make_harnoth.py
@@ -24,7 +24,7 @@ CENTRE = (EASTING[64], NORTHING[44])
 
 HIDDEN = gb.Scenario(
     name="what really lies there",
-    crater={"rim_diameter_km": 37.0, "melt_coefficient": 3e-4},
+    crater={"rim_diameter_km": 34.0, "melt_coefficient": 3e-4},
     damage={"porosity": 0.09, "decay_km": 2.6},
     fill={"breccia_contrast_kg_m3": -310.0, "sediment_density_kg_m3": 2350.0},
     history={"erosion_km": 0.55},
@@ -68,8 +68,12 @@ def main() -> None:
     noise = gb.simulate_noise(NOISE, EASTING, NORTHING, seed=SEED)
     values = structure() + dense_body() + regional() + noise.values
     grid = labels.data_array(
-        np.round(values, 3), ("northing", "easting"), {"northing": NORTHING, "easting": EASTING},
-        name="bouguer_anomaly", units="mGal", long_name="complete Bouguer anomaly (invented)",
+        np.round(values, 3),
+        ("northing", "easting"),
+        {"northing": NORTHING, "easting": EASTING},
+        name="bouguer_anomaly",
+        units="mGal",
+        long_name="complete Bouguer anomaly (invented)",
     )
     grid.attrs["comment"] = "Invented map of the invented Harnoth ring, Talvira craton; made by make_harnoth.py"
     target = Path(__file__).with_name("harnoth.nc")
