@@ -41,7 +41,7 @@ def structure() -> np.ndarray:
 
 
 def dense_body() -> np.ndarray:
-    """A steep dense intrusion, 9 km wide and 1 to 6 km deep, 85 km away."""
+    """A steep dense intrusion, 18 km wide and 1 to 6 km deep, 85 km away."""
     radius_edges, depth_edges = np.linspace(0, 9e3, 19), np.linspace(1e3, 6e3, 21)
     contrast = np.full((20, 18), 190.0)
     section = xr.Dataset(
