@@ -60,7 +60,7 @@ def compared(alone, tmp_path_factory) -> gb.runs.assess.Assessment:
     grid.to_dataset(name="bouguer").to_netcdf(path, engine="h5netcdf")
     observed = {"path": str(path), "centre_easting_km": 1140.0, "centre_northing_km": 2120.0}
     inference = {"chance_centres": 200, "noise_points": 150, "noise_draws": 4}
-    prior = {"models": 200, "odds": {"granite pluton": 3.0}}
+    prior = {"models": 400, "odds": {"granite pluton": 3.0}}
     return gb.assess(scenario(observed=observed, inference=inference, prior=prior))
 
 

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 from scipy import stats
 
+from gravbasin.forward.motion import is_axisymmetric
 from gravbasin.inference.bank import ImpactFamily
 from gravbasin.report.canvas import svg
 from gravbasin.report.map_figure import map_figure
@@ -177,12 +178,14 @@ def _odds(result: Assessment, comparison: Comparison) -> Drawing:
 
 def _parts(result: Assessment) -> Drawing:
     centre = result.profile.parts.isel(radius=0)
+    round_one = is_axisymmetric(result.scenario.deformation)
+    bent = "" if round_one else " Drawn before the scenario's deformation, which is no cause of its own."
     listed = ", ".join(f"{name} {signed(float(centre.sel(part=name)))} mGal" for name in centre.part.values)
     return _drawing(
         parts_figure(result.profile, rim_radius_m=_rim_radius(result)),
         "parts",
         "The modelled anomaly split by cause; the causes add up to the heavy line. A cause without any contrast left "
-        "today (worn away, or never there) has no line.",
+        f"today (worn away, or never there) has no line.{bent}",
         f"Modelled anomaly by cause, against distance. At the centre: {listed}.",
     )
 

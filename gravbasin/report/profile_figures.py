@@ -128,7 +128,7 @@ def parts_figure(profile: xr.Dataset, *, rim_radius_m: float) -> Figure:
     Parameters
     ----------
     profile : Dataset
-        parts (part, radius) and modelled (radius), mGal.
+        parts (part, radius), mGal.
     rim_radius_m : float
         Rim of the structure.
     """
@@ -141,7 +141,7 @@ def parts_figure(profile: xr.Dataset, *, rim_radius_m: float) -> Figure:
         for name, values in zip(profile.part.values, profile.parts.values, strict=True)
         if np.any(values)
     ]
-    lines.append(("all together", profile.modelled.values[shown], INK, "-", 2.6))
+    lines.append(("all together", profile.parts.values.sum(axis=0)[shown], INK, "-", 2.6))
     axes.axhline(0.0, color=FAINT, linewidth=0.9, zorder=0)
     for _, values, colour, dash, width in lines:
         axes.plot(radius[shown], values, color=colour, linestyle=dash, linewidth=width)

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, NamedTuple
 import numpy as np
 import xarray as xr
 
+from gravbasin.forward.motion import is_axisymmetric
 from gravbasin.report.canvas import svg
 from gravbasin.report.erosion_figure import erosion_figure, slices_shown
 from gravbasin.report.figures import TITLES, Drawing
@@ -140,7 +141,7 @@ def _numbers(described: SectionDescription) -> list[Row]:
 def _remarks(scenario: Scenario) -> list[str]:
     """What a reader could take the section for, and it is not."""
     remarks = []
-    if scenario.deformation != type(scenario.deformation)():
+    if not is_axisymmetric(scenario.deformation):
         remarks.append(
             "The scenario bends or cuts the structure ([deformation]). A section is round: what is shown is the "
             "structure before that."

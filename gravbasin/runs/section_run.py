@@ -158,12 +158,11 @@ def describe_section(
     stage("its anomaly")
     radius = profile_radii(KM * scenario.crater.rim_diameter_km, 0.0)
     height = scenario.model.station_height_m
-    error = _flat_earth_error(radius, mesh, section, height)
-    earth: Literal["flat", "sphere"] = "sphere" if error > SPHERE_MATTERS_MGAL else "flat"
+    earth, error = _earth(radius, mesh, section.density_contrast.values, height)
     table = ring_table(radius, mesh.radius_edges, mesh.depth_edges, height_m=height, earth=earth)
     profile = _profile(table, parts)
     stage("eroding it")
-    erosion = _eroded(scenario, radius[::2], earth)
+    erosion = _eroded(scenario, radius[::2])
     described = SectionDescription(scenario, model, section, parts, profile, erosion, earth, error)
     if out_dir is not None:
         stage("writing")
@@ -171,14 +170,14 @@ def describe_section(
     return described
 
 
-def _flat_earth_error(radius: Array, mesh: Mesh, section: xr.Dataset, height: float) -> float:
-    """Largest difference between flat and spherical Earth at every twentieth station, mGal."""
-    contrast = section.density_contrast.values
+def _earth(radius: Array, mesh: Mesh, contrast: Array, height: float) -> tuple[Literal["flat", "sphere"], float]:
+    """Which Earth to compute on, and the largest difference between the two at every twentieth station, mGal."""
     flat, sphere = (
         ring_table(radius[::20], mesh.radius_edges, mesh.depth_edges, height_m=height, earth=earth).anomaly(contrast)
         for earth in ("flat", "sphere")
     )
-    return float(np.abs(flat - sphere).max())
+    error = float(np.abs(flat - sphere).max())
+    return ("sphere" if error > SPHERE_MATTERS_MGAL else "flat"), error
 
 
 def _profile(table: RingTable, parts: xr.Dataset) -> xr.Dataset:
@@ -194,13 +193,17 @@ def _profile(table: RingTable, parts: xr.Dataset) -> xr.Dataset:
     return xr.Dataset({"modelled": whole, "parts": split.assign_coords(part=list(PARTS))}, attrs=attrs)
 
 
-def _eroded(scenario: Scenario, radius: Array, earth: Literal["flat", "sphere"]) -> xr.Dataset:
+def _eroded(scenario: Scenario, radius: Array) -> xr.Dataset:
     """The chart of cuts with the anomaly below each, and the share of the fresh anomaly that each slice carried."""
     step = next(step for least, step in STEPS_KM if scenario.crater.rim_diameter_km >= least)
     chart = erosion_chart(scenario, step_km=step)
     height = scenario.model.station_height_m
-    table = ring_table(radius, chart.radius_edges.values, chart.depth_edges.values, height_m=height, earth=earth)
-    anomaly = np.stack([table.anomaly(cut) for cut in chart.density_contrast.values])
+    cuts = chart.density_contrast.values
+    mesh = Mesh(chart.depth_edges.values, chart.radius_edges.values)
+    earth, _ = _earth(radius, mesh, cuts[0].sum(axis=0), height)
+    table = ring_table(radius, mesh.radius_edges, mesh.depth_edges, height_m=height, earth=earth)
+    # All cuts in one product: many small ones cost far more where other work keeps the cores busy.
+    anomaly = table.anomaly(cuts.reshape(-1, *cuts.shape[2:])).reshape(*cuts.shape[:2], -1)
     whole = anomaly.sum(axis=1)
     left = _left(radius, whole)
     new = {
