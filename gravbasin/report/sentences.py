@@ -88,7 +88,7 @@ def _rough(effective: float) -> list[str]:
     if effective >= FEW:
         return []
     return [f"The posterior is worth {effective:.0f} equally weighted models, fewer than {FEW:.0f}: intervals and the "
-            "correlation are rough, and likely too narrow. Raise prior.models for better ones."]  # fmt: skip
+            "correlation are rough, and the intervals likely too narrow."]  # fmt: skip
 
 
 def roundness(verdict: Verdict) -> str:
