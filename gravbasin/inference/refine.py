@@ -88,7 +88,7 @@ def refined(
     cloud, power, step = _Cloud(first.bank, logs), 0.0, 0.5
     log_evidence, variance = 0.0, 0.0
     while power < 1.0:
-        rise = _next_rise(cloud.logs, 1.0 - power, 0.5 * PARTICLES)
+        rise = _next_rise(cloud.logs, 1.0 - power, 0.5 * min(PARTICLES, cloud.logs.size))
         scaled = rise * cloud.logs
         total = special.logsumexp(scaled)
         weights = np.exp(scaled - total)
