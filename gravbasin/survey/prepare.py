@@ -21,8 +21,8 @@ from gravbasin.survey.layouts import Site, square_area
 from gravbasin.survey.merit import SIMULATIONS, Stakes, robust_gram, scatter_root
 from gravbasin.survey.plan import Quest
 from gravbasin.survey.shapes import projected_crs, read_points, read_shapes
-from gravbasin.survey.sight import Plane, profile_curves
-from gravbasin.survey.vanish import Worn, disc_weights, worn_structures
+from gravbasin.survey.sight import Plane, disc_weights, profile_curves
+from gravbasin.survey.vanish import Worn, worn_structures
 
 __all__ = ["Prepared", "degrees", "plausible_noises", "prepare", "site_of"]
 
@@ -160,7 +160,8 @@ def prepare(
         family, radius, models=2 * survey.models, height=height, rng=np.random.default_rng([seed, 10])
     )
     noises = plausible_noises(survey, noise, seed)
-    banks = _rival_banks(scenario, survey, radius, templates, noises[0])
+    plane = Plane.of(radius)
+    banks = _rival_banks(scenario, survey, plane.gram([noises[0]]).gram[0], radius, templates)
     progress("wearing structures down")
     worn = worn_structures(scenario, radius)
     diameters = np.geomspace(sizes.low, sizes.high, survey.chart_diameters) if survey.chart_diameters else []
@@ -170,7 +171,7 @@ def prepare(
     )
     everything = [templates, impacts.profiles.T, *(b.profiles.T for b, _ in banks.values())]
     everything += [w.profiles.reshape(-1, radius.size).T for w in (worn, *chart)]
-    everything += [w.parts[:, 0].reshape(-1, radius.size).T for w in (worn,)]
+    everything.append(worn.causes.reshape(-1, radius.size).T)
     curves = profile_curves(radius, np.concatenate(everything, axis=1))
     held = curves.coefficients(templates)
     stakes = Stakes(
@@ -184,9 +185,8 @@ def prepare(
         stretch={name: limits for name, (_, limits) in banks.items()},
         deviates=np.random.default_rng([seed, 11]).standard_normal((len(held), SIMULATIONS)),
     )
-    quest = Quest(
-        scenario, survey, site, stakes, Plane.of(curves), noises, *_errors(survey, site), float(np.log(sizes.high / sizes.low))
-    )
+    searched = float(np.log(sizes.high / sizes.low))
+    quest = Quest(scenario, survey, site, stakes, plane.through(curves), noises, *_errors(survey, site), searched)
     return Prepared(quest, worn, chart, templates[:, 0])
 
 
@@ -207,15 +207,16 @@ def _errors(survey: Survey, site: Site) -> tuple[float, float]:
 
 
 def _rival_banks(
-    scenario: Scenario, survey: Survey, radius: Array, templates: Array, noise: NoiseModel
+    scenario: Scenario, survey: Survey, gram: Array, radius: Array, templates: Array
 ) -> dict[str, tuple[Bank, Array]]:
     """Rivals drawn from their priors, and more of them where they come nearest to the structure."""
+    robust = robust_gram(gram, scatter_root(templates, disc_weights(radius)))
     found = {}
     for number, rival in enumerate(rivals_of(scenario)):
         rng = np.random.default_rng([scenario.seed, 12, number])
         height = scenario.model.station_height_m
         first = build_bank(rival, radius, models=survey.models, height=height, rng=rng)
-        near = _nearest(first, _limits(first, rival), templates, noise)
+        near = _nearest(first, _limits(first, rival), templates[:, 0], robust)
         again = build_bank(
             rival, radius, models=survey.models // 2, height=height, rng=rng, ranges=_around(rival, first, near)
         )
@@ -238,14 +239,12 @@ def _limits(bank: Bank, rival: Rival) -> Array:
     return np.sort(np.stack([prior.low / contrast, prior.high / contrast]), axis=0)
 
 
-def _nearest(bank: Bank, limits: Array, templates: Array, noise: NoiseModel) -> NDArray[np.intp]:
-    """Bodies nearest to the structure, each at its best multiple, seen by an endless survey."""
-    curves = profile_curves(bank.radius, np.concatenate([templates, bank.profiles.T], axis=1), tolerance_mgal=0.05)
-    held = curves.coefficients(templates)
-    gram = robust_gram(Plane.of(curves).gram([noise]).gram[0], scatter_root(held, np.ones(len(held))))
-    bodies = curves.coefficients(bank.profiles.T)
-    along, power = held[:, 0] @ gram @ bodies, np.sum(bodies * (gram @ bodies), axis=0)
-    multiple = np.clip(along / np.maximum(power, 1e-300), *limits)
+def _nearest(bank: Bank, limits: Array, model: Array, gram: Array) -> NDArray[np.intp]:
+    """Bodies nearest to the structure, each at its best multiple, seen by an endless survey (its G on the radii)."""
+    bodies = bank.profiles.T
+    white = gram @ bodies
+    along, power = model @ white, np.maximum(np.sum(bodies * white, axis=0), 1e-300)
+    multiple = np.clip(along / power, *limits)
     return np.argsort(multiple**2 * power - 2.0 * multiple * along)[:NEAREST]
 
 

@@ -131,7 +131,7 @@ def global_false_alarm(threshold: Array | float, side: float, sizes: float) -> A
 
 def _threshold(side: float, sizes: float, probability: float) -> float:
     def excess(u: float) -> float:
-        return math.log(float(global_false_alarm(u, side, sizes))) - math.log(probability)
+        return math.log(max(float(global_false_alarm(u, side, sizes)), 1e-300)) - math.log(probability)
 
     low = float(stats.norm.isf(probability))
     if excess(low) <= 0.0:

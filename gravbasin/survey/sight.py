@@ -26,7 +26,7 @@ _TABLE = 1 << 15  # distances at which a covariance is tabulated; linear between
 
 @dataclasses.dataclass(frozen=True, eq=False)
 class Sight:
-    """What a set of data tells about profiles p = `curves` @ c under several noise models.
+    """What a set of data tells about profiles under several noise models; c are coefficients of some `Curves`, or values.
 
     Attributes
     ----------
@@ -71,28 +71,38 @@ class Curves:
 
     def at(self, distance: Array) -> Array:
         """The curves at distances from the centre, m, (n, n_mode); splines, level at the centre, 0 beyond the last."""
-        spline = CubicSpline(self.radius, self.shapes, bc_type=((1, 0.0), (2, 0.0)))
-        inside = (distance <= self.radius[-1])[:, None]
-        return np.where(inside, spline(np.minimum(distance, self.radius[-1])), 0.0)
+        return spline_at(self.radius, self.shapes, distance)
 
 
-def profile_curves(radius: Array, profiles: Array, *, tolerance_mgal: float = 0.005) -> Curves:
-    """The fewest curves that give every profile to the tolerance (root mean square over area within the last radius).
+def spline_at(radius: Array, values: Array, distance: Array) -> Array:
+    """Profiles (n_radius, m) at distances (n,), as cubic splines that are level at the centre, 0 beyond the last."""
+    level = np.zeros(values.shape[1])
+    spline = CubicSpline(radius, values, bc_type=((1, level), (2, level)))
+    inside = (distance <= radius[-1])[:, None]
+    return np.where(inside, spline(np.minimum(distance, radius[-1])), 0.0)
+
+
+def disc_weights(radius: Array) -> Array:
+    """Area that each node of a profile stands for, m²."""
+    edges = np.concatenate([[0.0], 0.5 * (radius[1:] + radius[:-1]), radius[-1:]])
+    return np.asarray(np.pi * np.diff(edges**2))
+
+
+def profile_curves(radius: Array, profiles: Array, *, tolerance_mgal: float = 0.02) -> Curves:
+    """The fewest curves that give every profile to the tolerance.
 
     Parameters
     ----------
     radius : (n_radius,) array, m
     profiles : (n_radius, n) array, mGal
     tolerance_mgal : float
-        For the worst profile, over a disc that ends where its own signal has fallen to 1 % of its peak or more: the
-        mean runs over the whole disc, so errors near a small structure count for less than they would alone.
+        Root mean square of what is missed of the worst profile, over the area in which it exceeds 1 % of its peak.
     """
-    edges = np.concatenate([[0.0], 0.5 * (radius[1:] + radius[:-1]), radius[-1:]])
-    weight = np.pi * np.diff(edges**2)
+    weight = disc_weights(radius)
     root = np.sqrt(weight)[:, None]
-    left, _, _ = np.linalg.svd((root * profiles) @ (root * profiles).T)
+    _, left = np.linalg.eigh((root * profiles) @ (root * profiles).T)
+    left = left[:, ::-1]
     scaled = left.T @ (root * profiles)
-    # What is missed by the first r curves, per profile, relative to the area within its half of the signal.
     reach = np.maximum(np.sum(weight[:, None] * (np.abs(profiles) > 0.01 * np.abs(profiles).max(axis=0)), axis=0), 1.0)
     missed = np.sqrt(np.cumsum((scaled**2)[::-1], axis=0)[::-1] / reach).max(axis=1)
     count = int(np.argmax(missed < tolerance_mgal)) if (missed < tolerance_mgal).any() else radius.size
@@ -229,17 +239,16 @@ class Plane:
     Attributes
     ----------
     wavenumber : (n_k,) array, rad/m
-    transform : (n_k, n_mode) array, m²
-        Hankel transforms of the curves, T(k) = 2π ∫ t(r) J0(kr) r dr.
+    transform : (n_k, n) array, m²
+        Hankel transform T(k) = 2π ∫ t(r) J0(kr) r dr of the profile with every coefficient one by itself.
     """
 
     wavenumber: Array
     transform: Array
 
     @classmethod
-    def of(cls, curves: Curves) -> Plane:
-        """Transforms of the curves, down to twice their finest node spacing."""
-        radius = curves.radius
+    def of(cls, radius: Array) -> Plane:
+        """For profiles given by their values at these radii, m, down to twice the finest step between them."""
         highest = np.pi / float(np.diff(radius).min())
         count = int(np.clip(4.0 * highest * radius[-1] / np.pi, 1000, 4000))
         k = highest * (np.arange(count) + 0.5) / count
@@ -254,8 +263,12 @@ class Plane:
         weight = (half * weights * r).ravel()
         # The last tenth is faded out: a step at the last radius would ring at every wavenumber.
         fade = 0.5 * (1.0 + np.cos(np.pi * np.clip((r.ravel() / radius[-1] - 0.9) / 0.1, 0.0, 1.0)))
-        values = curves.at(r.ravel()) * (weight * fade)[:, None]
+        values = spline_at(radius, np.eye(radius.size), r.ravel()) * (weight * fade)[:, None]
         return cls(k, 2.0 * np.pi * special.j0(np.outer(k, r.ravel())) @ values)
+
+    def through(self, curves: Curves) -> Plane:
+        """The same for profiles given by their coefficients."""
+        return Plane(self.wavenumber, self.transform @ curves.shapes)
 
     def density(self, noise: NoiseModel, *, spacing: float = 0.0, error: float = 0.0) -> Array:
         """Noise power at every wavenumber: geology, and white error of stations at a spacing, mGal² m²."""

@@ -8,14 +8,14 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from gravbasin.crater import EROSION_RATES, PARTS, CraterModel, contrast_parts, crater_model, shared_mesh
+from gravbasin.crater import EROSION_RATES, PARTS, CraterModel, contrast, contrast_parts, crater_model, shared_mesh
 from gravbasin.crater.model import ground_of
 from gravbasin.forward.rings import ring_table
 from gravbasin.inference.bank import BANK_LAYERS, BANK_RINGS, ImpactFamily
 from gravbasin.inference.detect import detection_probability
 from gravbasin.scenario import Scenario
 from gravbasin.survey.merit import filter_of, scatter_root
-from gravbasin.survey.sight import Curves, Sight
+from gravbasin.survey.sight import Curves, Sight, disc_weights
 
 __all__ = ["CAUSES", "Chart", "Vanishing", "Worn", "chart_of", "vanishing_erosion", "vanishing_of", "worn_structures"]
 
@@ -36,19 +36,17 @@ class Worn:
     erosion_km : (n_level,) array
         Rock stripped, from 0 down.
     radius : (n_radius,) array, m
-    parts : (n_level, 1 + n_draw, n_cause, n_radius) array, mGal
-        Anomaly by `CAUSES`; the first is the structure itself. A draw keeps its random numbers at every level.
+    profiles : (n_level, 1 + n_draw, n_radius) array, mGal
+        The first is the structure itself. A draw keeps its random numbers at every level.
+    causes : (n_level, n_cause, n_radius) array, mGal
+        The structure itself by `CAUSES`.
     """
 
     rim_diameter_km: float
     erosion_km: Array
     radius: Array
-    parts: Array
-
-    @property
-    def profiles(self) -> Array:
-        """Whole anomaly, (n_level, 1 + n_draw, n_radius), mGal."""
-        return np.asarray(self.parts.sum(axis=2))
+    profiles: Array
+    causes: Array
 
 
 @dataclasses.dataclass(frozen=True, eq=False)
@@ -146,13 +144,14 @@ def worn_structures(
     models = [[_drawn(case, j, scenario.seed) for j in range(count + 1)] for case in cases]
     mesh = shared_mesh([m for row in models for m in (row[0], *row[-2:])], layers=BANK_LAYERS, rings=BANK_RINGS)
     table = ring_table(radius, mesh.radius_edges, mesh.depth_edges, height_m=scenario.model.station_height_m)
-    parts = np.empty((len(cases), count + 1, len(CAUSES), radius.size))
+    profiles, causes = np.empty((len(cases), count + 1, radius.size)), np.empty((len(cases), len(CAUSES), radius.size))
     for i, row in enumerate(models):
-        whole = np.stack([contrast_parts(model, mesh) for model in row])
-        grouped = [whole[:, [PARTS.index(p) for p in names]].sum(axis=1) for names in CAUSES.values()]
-        for j, contrast in enumerate(grouped):
-            parts[i, :, j] = table.anomaly(contrast)
-    return Worn(float(diameter), np.asarray(erosion_km, dtype=float), radius, parts)
+        split = contrast_parts(row[0], mesh)
+        grouped = [split[[PARTS.index(p) for p in names]].sum(axis=0) for names in CAUSES.values()]
+        found = table.anomaly(np.stack([*grouped, *(contrast(model, mesh) for model in row[1:])]))
+        causes[i] = found[: len(CAUSES)]
+        profiles[i] = np.concatenate([causes[i].sum(axis=0, keepdims=True), found[len(CAUSES) :]])
+    return Worn(float(diameter), np.asarray(erosion_km, dtype=float), radius, profiles, causes)
 
 
 def _drawn(case: Scenario, number: int, seed: int) -> CraterModel:
@@ -216,12 +215,12 @@ def vanishing_of(
 
 def _tables(worn: Worn, sight: Sight, curves: Curves | None) -> tuple[Array, Array]:
     """Signal-to-noise ratios (level, noise, 1 + draw), and those of the model by cause under the best noise."""
-    levels, draws = worn.parts.shape[:2]
+    levels, draws = worn.profiles.shape[:2]
     table = np.zeros((levels, len(sight.gram), draws))
     causes = np.zeros((len(CAUSES), levels))
     weight = disc_weights(worn.radius)
     for i in range(levels):
-        profiles, split = worn.profiles[i].T, worn.parts[i, 0].T
+        profiles, split = worn.profiles[i].T, worn.causes[i].T
         if curves is not None:
             profiles, split = curves.coefficients(profiles), curves.coefficients(split)
         scatter = scatter_root(profiles, weight if curves is None else np.ones(profiles.shape[0]))
@@ -232,12 +231,6 @@ def _tables(worn: Worn, sight: Sight, curves: Curves | None) -> tuple[Array, Arr
                 if j == 0:
                     causes[:, i] = response @ split / noise
     return table, causes
-
-
-def disc_weights(radius: Array) -> Array:
-    """Area that each node of a profile stands for, m²."""
-    edges = np.concatenate([[0.0], 0.5 * (radius[1:] + radius[:-1]), radius[-1:]])
-    return np.asarray(np.pi * np.diff(edges**2))
 
 
 def last_crossing(levels: Array, values: Array, required: float) -> Array:
