@@ -72,7 +72,9 @@ class Sweep(Table):
         None, description="step of these maps, km; by default 1/40 of the largest diameter"
     )
     layers: int = Field(40, ge=20, le=400, description="layers of a case's section")
-    rings: int = Field(120, ge=40, le=800, description="rings of a case's section to its rim, about")
+    rings: int = Field(
+        80, ge=40, le=800, description="rings across the smallest structure; a sweep over sizes adds as many as it needs"
+    )
 
     @model_validator(mode="after")
     def _whole(self) -> Sweep:
