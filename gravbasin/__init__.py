@@ -16,6 +16,7 @@ if TYPE_CHECKING:
     from gravbasin.forward.rings import ring_anomaly
     from gravbasin.observed import estimate_noise, radial_profile, read_grid, simulate_noise
     from gravbasin.runs.assess import assess
+    from gravbasin.runs.plan_run import plan_survey
     from gravbasin.scenario import Scenario
     from gravbasin.scenario_file import load_scenario
 
@@ -33,6 +34,7 @@ _HOMES = {
     "harmonica_anomaly": "forward.reference",
     "layered_prisms": "forward.layers",
     "load_scenario": "scenario_file",
+    "plan_survey": "runs.plan_run",
     "radial_profile": "observed",
     "read_grid": "observed",
     "ring_anomaly": "forward.rings",
@@ -54,6 +56,7 @@ __all__ = [
     "harmonica_anomaly",
     "layered_prisms",
     "load_scenario",
+    "plan_survey",
     "radial_profile",
     "read_grid",
     "ring_anomaly",

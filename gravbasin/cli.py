@@ -156,6 +156,30 @@ def init(rim_diameter_km: float, erosion_km: float, out: Path, quiet: bool) -> N
         click.echo(f"wrote {out}; run it with: gravbasin assess {out}")
 
 
+@cli.command(epilog="Example: gravbasin spacing configs/plan_demo.toml -o plan --set survey.costs.budget=60000")
+@_scenario_options("_plan")
+def spacing(scenario: Path, out: Path | None, changes: tuple[str, ...], quiet: bool) -> None:
+    """Plan the survey that would settle it: layouts, spacings, costs, station files."""
+    from gravbasin.runs.plan_run import CAUTIONS, plan
+    from gravbasin.scenario_file import load_scenario, parse_override
+
+    question = load_scenario(scenario, dict(parse_override(text) for text in changes))
+    folder = out or Path(f"{scenario.stem}_plan")
+    with _told(quiet) as progress:
+        result = plan(question, folder, progress=progress)
+    if quiet:
+        return
+    vanishing = result.vanishing
+    click.echo(f"{result.recommendation.outcome.upper()}\n{result.recommendation.statement}\n")
+    click.echo(
+        f"vanishes    below {vanishing.median:.2g} km of erosion ({vanishing.low:.2g} to {vanishing.high:.2g}) "
+        "for these stations"
+    )
+    click.echo("\n".join(f"rule        {text}" for text in result.rules_judged))
+    click.echo("\n" + "\n".join(CAUTIONS))
+    click.echo(f"\nstations: {folder / 'stations.csv'}\nreport: {folder / 'report.html'}")
+
+
 @cli.command(epilog="Example: gravbasin selfcheck")
 @click.option("--quick", is_flag=True, help="Coarser bodies and fewer stations.")
 @click.option("--quiet", is_flag=True, help="Print nothing but faults.")

@@ -68,8 +68,9 @@ class _State:
 
         def columns(stations: Stations) -> Array:
             basis = polynomial_basis(
-                *stations.place.T, noise.regional_order, centre=(float(centre[0]), float(centre[1])), scale=scale
-            )
+                stations.place[:, 0], stations.place[:, 1], noise.regional_order,
+                centre=(float(centre[0]), float(centre[1])), scale=scale,
+            )  # fmt: skip
             return np.concatenate([stakes.curves.at(stations.distance), basis], axis=1)
 
         self.modes = stakes.curves.shapes.shape[1]

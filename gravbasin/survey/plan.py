@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Callable, Sequence
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
@@ -133,7 +133,7 @@ def evaluate(quest: Quest, points: Array) -> Cell:
 
 
 def sweep(
-    quest: Quest, spacings: Sequence[float], *, progress: Callable[[str], None] = lambda stage: None
+    quest: Quest, spacings: Array, *, progress: Callable[[str], None] = lambda stage: None
 ) -> dict[tuple[str, float], Cell]:
     """Every layout at every spacing, m; cells without room for a new station are left out.
 
@@ -142,7 +142,7 @@ def sweep(
     InputError
         No layout has room for a single station at any spacing.
     """
-    cells = {}
+    cells: dict[tuple[str, float], Cell] = {}
     for layout in quest.survey.layouts:
         progress(f"judging layouts: {layout}")
         for spacing in spacings:
@@ -237,9 +237,9 @@ def numbers(quest: Quest, cell: Cell, spacing: float) -> dict[str, float]:
     }
 
 
-def table(quest: Quest, cells: dict[tuple[str, float], Cell], spacings: Sequence[float], **attrs: Any) -> xr.Dataset:
+def table(quest: Quest, cells: dict[tuple[str, float], Cell], spacings: Array, **attrs: Any) -> xr.Dataset:
     """The sweep as a Dataset (layout, spacing), spacing in metres; NaN where a layout has no room for a station."""
-    layouts = list(quest.survey.layouts)
+    layouts: list[str] = list(quest.survey.layouts)
     filled = {name: np.full((len(layouts), len(spacings)), np.nan) for name in _COLUMNS}
     rival = np.full((len(layouts), len(spacings)), "", dtype=object)
     for i, layout in enumerate(layouts):

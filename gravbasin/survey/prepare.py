@@ -164,7 +164,7 @@ def prepare(
     banks = _rival_banks(scenario, survey, plane.gram([noises[0]]).gram[0], radius, templates)
     progress("wearing structures down")
     worn = worn_structures(scenario, radius)
-    diameters = np.geomspace(sizes.low, sizes.high, survey.chart_diameters) if survey.chart_diameters else []
+    diameters = np.geomspace(sizes.low, sizes.high, survey.chart_diameters)
     chart = tuple(
         worn_structures(scenario, radius, rim_diameter_km=float(d), erosion_km=worn.erosion_km, draws=8)
         for d in diameters

@@ -12,7 +12,7 @@ from gravbasin.survey.costs import Effort
 from gravbasin.survey.merit import Merit
 from gravbasin.survey.plan import Cell, Quest
 
-__all__ = ["Recommendation", "meets", "recommend"]
+__all__ = ["NAMES", "Recommendation", "affordable", "goal", "meets", "reached", "recommend"]
 
 KM = 1000.0
 
@@ -47,7 +47,8 @@ def meets(quest: Quest, detection: float, distance: float) -> bool:
     return {"detect": seen, "tell apart": apart, "both": seen and apart}[quest.survey.goal]
 
 
-def _reached(quest: Quest, cell: Cell) -> tuple[float, float]:
+def reached(quest: Quest, cell: Cell) -> tuple[float, float]:
+    """Mean detection probability for the survey's place, and the distance that four noise models in five reach."""
     return float(cell.detection(quest.survey.place).mean()), _distance(cell.merit)
 
 
@@ -69,11 +70,11 @@ def recommend(
     existing : Cell, optional
         The existing stations alone.
     """
-    if existing is not None and meets(quest, *_reached(quest, existing)):
+    if existing is not None and meets(quest, *reached(quest, existing)):
         count = len(quest.site.existing)
         text = f"The {count} existing stations already meet the goal ({_merit(quest, existing)}): no new one is needed."
         return Recommendation("existing stations suffice", None, None, text)
-    good = {key: cell for key, cell in cells.items() if meets(quest, *_reached(quest, cell))}
+    good = {key: cell for key, cell in cells.items() if meets(quest, *reached(quest, cell))}
     within = {key: cell for key, cell in good.items() if affordable(quest, cell.effort)}
     if within:
         key = min(within, key=lambda k: _price(within[k].effort))
@@ -85,7 +86,7 @@ def recommend(
         key = min(good, key=lambda k: _price(good[k].effort))
         text = f"The goal is beyond the budget: the cheapest that meets it is {_named(quest, key, good[key])}. {best}"
         return Recommendation("beyond the budget", *nearest, text)
-    if not meets(quest, *_reached(quest, ceiling)):
+    if not meets(quest, *reached(quest, ceiling)):
         text = (
             f"No survey can meet the goal ({goal(quest)}): even an endless one without station errors reaches "
             f"{_merit(quest, ceiling)}, because the geology around it is as rough as that. {best}"
@@ -131,7 +132,7 @@ def _nearest(quest: Quest, cells: dict[tuple[str, float], Cell]) -> tuple[str, f
     s = quest.survey
 
     def shortfall(key: tuple[str, float]) -> float:
-        detection, distance = _reached(quest, cells[key])
+        detection, distance = reached(quest, cells[key])
         seen, apart = detection / s.detection_probability, distance / s.rival_distance
         return {"detect": seen, "tell apart": apart, "both": min(seen, apart)}[s.goal]
 
@@ -139,7 +140,7 @@ def _nearest(quest: Quest, cells: dict[tuple[str, float], Cell]) -> tuple[str, f
 
 
 def _merit(quest: Quest, cell: Cell) -> str:
-    detection, distance = _reached(quest, cell)
+    detection, distance = reached(quest, cell)
     seen = f"detection probability {_probability(detection)}"
     apart = f"{distance:.1f} standard errors to the nearest rival ({cell.merit.best_rival})"
     return {"detect": seen, "tell apart": apart, "both": f"{seen}, {apart}"}[quest.survey.goal]

@@ -132,8 +132,8 @@ def read_points(path: Path, *, crs: Any, what: str) -> Array:
         try:
             points.append([float(row[name]) for name in columns])
         except (TypeError, ValueError):
-            shown = [row[name] for name in columns]
-            raise InputError(what, shown, f"is not a position (line {number})", "mend that line", path.name) from None
+            met = [row[name] for name in columns]
+            raise InputError(what, met, f"is not a position (line {number})", "mend that line", path.name) from None
     return transformed(np.array(points), None, crs, what=what, where=path.name)
 
 

@@ -26,7 +26,7 @@ _TABLE = 1 << 15  # distances at which a covariance is tabulated; linear between
 
 @dataclasses.dataclass(frozen=True, eq=False)
 class Sight:
-    """What a set of data tells about profiles under several noise models; c are coefficients of some `Curves`, or values.
+    """What a set of data tells about profiles under several noise models, given as coefficients c or as values.
 
     Attributes
     ----------
