@@ -16,6 +16,7 @@ if TYPE_CHECKING:
     from gravbasin.forward.rings import ring_anomaly
     from gravbasin.observed import estimate_noise, radial_profile, read_grid, simulate_noise
     from gravbasin.runs.assess import assess
+    from gravbasin.runs.sweep import sweep
     from gravbasin.runs.plan_run import plan_survey
     from gravbasin.scenario import Scenario
     from gravbasin.scenario_file import load_scenario
@@ -40,6 +41,7 @@ _HOMES = {
     "ring_anomaly": "forward.rings",
     "section_parts": "crater",
     "simulate_noise": "observed",
+    "sweep": "runs.sweep",
 }
 
 __all__ = [
@@ -62,6 +64,7 @@ __all__ = [
     "ring_anomaly",
     "section_parts",
     "simulate_noise",
+    "sweep",
 ]
 
 

@@ -134,6 +134,48 @@ def section(scenario: Path, out: Path | None, changes: tuple[str, ...], quiet: b
         click.echo(f"\nreport: {folder / 'report.html'}")
 
 
+@cli.command(epilog="Example: gravbasin sweep configs/sweep_demo.toml -o sweep_demo --executor dask --workers 2")
+@_scenario_options("_sweep")
+@click.option(
+    "--executor",
+    default="serial",
+    show_default=True,
+    help="serial, threads, dask (workers on this machine), or a dask scheduler's address, tcp://HOST:PORT.",
+)
+@click.option("--workers", type=click.IntRange(min=1), default=None, help="Threads or local workers.  [default: cores]")
+@click.option("--dry-run", is_flag=True, help="Say what it would take, from a measured sample, and stop.")
+@click.option("--yes", is_flag=True, help="Go beyond two hours, 4 GiB of memory or 20 GiB on disk.")
+def sweep(
+    scenario: Path,
+    out: Path | None,
+    changes: tuple[str, ...],
+    quiet: bool,
+    executor: str,
+    workers: int | None,
+    dry_run: bool,
+    yes: bool,
+) -> None:
+    """Compute the what-if cases of a scenario's [sweep] table; the same command continues an interrupted one."""
+    from gravbasin.runs.sweep import estimate_sweep
+    from gravbasin.runs.sweep import sweep as run
+    from gravbasin.scenario_file import load_scenario, parse_override
+
+    question = load_scenario(scenario, dict(parse_override(text) for text in changes))
+    folder = out or Path(f"{scenario.stem}_sweep")
+    if dry_run:
+        click.echo("\n".join(estimate_sweep(question, executor, workers=workers).lines()))
+        return
+    try:
+        with _told(quiet) as progress:
+            cases = run(question, folder, executor, workers=workers, yes=yes, progress=progress)
+    except KeyboardInterrupt:
+        click.echo(f"interrupted; the cases done are kept in {folder}, and the same command continues", err=True)
+        sys.exit(NOT_FINISHED)
+    if not quiet:
+        failed = int((cases.failure != "").sum())
+        click.echo(f"{cases.sizes['case']} cases, {failed} of them failed\n\nreport: {folder / 'report.html'}")
+
+
 @cli.command(epilog="Example: gravbasin init --rim-diameter-km 45 --erosion-km 4 -o starter.toml")
 @click.option("--rim-diameter-km", type=float, required=True, help="Final rim diameter before erosion.")
 @click.option("--erosion-km", type=float, default=0.0, show_default=True, help="Rock stripped since the impact.")
