@@ -16,8 +16,8 @@ if TYPE_CHECKING:
     from gravbasin.forward.rings import ring_anomaly
     from gravbasin.observed import estimate_noise, radial_profile, read_grid, simulate_noise
     from gravbasin.runs.assess import assess
-    from gravbasin.runs.sweep import sweep
     from gravbasin.runs.plan_run import plan_survey
+    from gravbasin.runs.sweep import sweep
     from gravbasin.scenario import Scenario
     from gravbasin.scenario_file import load_scenario
 
