@@ -46,7 +46,7 @@ def heat_figure(means: Array, x: Bins, y: Bins, *, words: tuple[str, str, str]) 
     if means.size <= 150:
         _write(axes, means, low, high, signed)
     bar = figure.colorbar(mesh, cax=figure.add_axes((0.85, 0.13, 0.02, 0.80)))
-    bar.outline.set_visible(False)  # type: ignore[operator]
+    bar.outline.set_visible(False)
     bar.ax.tick_params(labelsize=SMALL, color=QUIET)
     bar.set_label(words[0], fontsize=TEXT, color=INK)
     _ticks(axes, x, y)

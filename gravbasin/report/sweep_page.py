@@ -161,7 +161,8 @@ def _still(cases: xr.Dataset, bins: dict[str, Bins], pair: tuple[str, str]) -> s
     means, _ = means_over(cases.signal_to_noise.values, bins[pair[0]], bins[pair[1]])
     if not np.isfinite(means).any():
         return ""
-    words = (_words(cases, "signal_to_noise").split(",")[0], *(_axis_words(cases, name) for name in pair))
+    across, up = (_axis_words(cases, name) for name in pair)
+    words = (_words(cases, "signal_to_noise").split(",")[0], across, up)
     figure = heat_figure(means, bins[pair[0]], bins[pair[1]], words=words)
     span = f"from {np.nanmin(means):.3g} to {np.nanmax(means):.3g}"
     text = f"Mean signal-to-noise ratio over {pair[0]} and {pair[1]}, {span}."

@@ -11,8 +11,9 @@ from numpy.typing import NDArray
 
 from gravbasin.crater import CraterModel, contrast, crater_model, density_section
 from gravbasin.crater.history import Ground
-from gravbasin.forward.deformation import azimuthal_mean, is_axisymmetric
+from gravbasin.forward.deformation import azimuthal_mean
 from gravbasin.forward.layers import grid_anomaly, layered_prisms
+from gravbasin.forward.motion import is_axisymmetric
 from gravbasin.forward.rings import ring_anomaly
 from gravbasin.inference.detect import detectability, required_snr
 from gravbasin.inference.likelihood import shape_scatter

@@ -169,7 +169,7 @@ class DaskExecutor:
             alone = {f"distributed.nanny.pre-spawn-environ.{name}_NUM_THREADS": 1 for name in ("OMP", "MKL", "NUMBA")}
             self._stack.enter_context(dask.config.set(alone))
             cluster = self._stack.enter_context(
-                LocalCluster(  # type: ignore[no-untyped-call]
+                LocalCluster(
                     n_workers=self.workers,
                     threads_per_worker=1,
                     processes=True,
@@ -214,7 +214,7 @@ class DaskExecutor:
 
     def _result(self, future: Any) -> Done:
         from distributed import KilledWorker
-        from distributed.comm import CommClosedError
+        from distributed.comm.core import CommClosedError
 
         try:
             done: Done = future.result()

@@ -161,7 +161,7 @@ class Design:
 
             seed = int(np.random.default_rng([self.seed, STREAM]).integers(2**31))
             object.__setattr__(self, "_made", qmc.Sobol(dimensions, seed=seed))
-        return self._made  # type: ignore[attr-defined,no-any-return]
+        return self._made  # type: ignore[attr-defined]
 
     @cached_property
     def _hypercube(self) -> Array:

@@ -161,10 +161,10 @@ def _places(code: Array) -> Array:
 
 def _correlation_ratio(place: Array, values: Array) -> float:
     """Share of the variance between bins, less the share that chance gives."""
-    _, place = np.unique(place, return_inverse=True)
-    count = np.bincount(place)
-    mean = np.bincount(place, weights=values) / count
-    within = float(np.sum((values - mean[place]) ** 2)) / max(values.size - count.size, 1)
+    _, group = np.unique(place, return_inverse=True)
+    count = np.bincount(group)
+    mean = np.bincount(group, weights=values) / count
+    within = float(np.sum((values - mean[group]) ** 2)) / max(values.size - count.size, 1)
     return float(1.0 - within * (values.size - 1) / np.sum((values - values.mean()) ** 2))
 
 
