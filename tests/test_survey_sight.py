@@ -64,7 +64,8 @@ def test_in_white_noise_signal_to_noise_grows_as_the_root_of_the_station_count()
     found = []
     for copies in (1, 4, 16):
         many = Stations(np.tile(once.place, (copies, 1)), np.tile(once.error, copies))
-        found.append(signal_to_noise(station_sight(many, CURVES, [ALMOST_WHITE]), np.zeros((3, 0)), MODEL[:, None])[0, 0])
+        sight = station_sight(many, CURVES, [ALMOST_WHITE])
+        found.append(signal_to_noise(sight, np.zeros((3, 0)), MODEL[:, None])[0, 0])
     np.testing.assert_allclose(found[0], np.sqrt(np.sum((t - t.mean()) ** 2)) / 0.3, rtol=1e-6)
     np.testing.assert_allclose([found[1] / found[0], found[2] / found[0]], [2.0, 4.0], rtol=1e-6)
 
