@@ -12,6 +12,7 @@ import math
 import threading
 from collections.abc import Callable, Hashable
 from functools import cached_property
+from pathlib import Path
 from typing import Any, TypeVar
 
 import numpy as np
@@ -82,8 +83,9 @@ class Recipe:
 
 @dataclasses.dataclass(frozen=True, eq=False)
 class Cells:
-    """One mesh with its table, and the volume of its cells (flattened, m³)."""
+    """One mesh with its table, the volume of its cells (flattened, m³), and the name of the table's file."""
 
+    label: str
     mesh: Mesh
     table: RingTable
     volume: Array
@@ -104,8 +106,11 @@ class Fading:
         Erosion levels.
     rings : (n_ring, n_layer, n_radius) array
         From contrast (kg/m³) to ring means (mGal), stations on the uppermost layer.
+    label : str
+        Name of the table's file.
     """
 
+    label: str
     mesh: Mesh
     cuts: Array
     rings: Array
@@ -163,7 +168,17 @@ class Survey:
 
 
 class Bench:
-    """Tables of one sweep, made when first asked for and kept within a bound."""
+    """Tables of one sweep, made when first asked for and kept within a bound.
+
+    Attributes
+    ----------
+    radius : (n_radius,) array, m
+        Radii of the profiles.
+    radius_edges : (n_ring + 1,) array, m
+        Of all sections.
+    shelf : Path or None
+        Folder with tables that another process of this machine has made, to be shared instead of made again.
+    """
 
     def __init__(self, recipe: Recipe) -> None:
         self.recipe = recipe
@@ -176,6 +191,7 @@ class Bench:
         reach = max(2.0, recipe.widest_disc + 0.1) * recipe.widest + 2 * LEAST_RINGS * self._spacing(recipe.scenario)
         end = float(np.arcsinh(reach / scale))
         self.radius: Array = scale * np.sinh(np.linspace(0.0, end, math.ceil(end / RADIUS_STEP) + 1))
+        self.shelf: Path | None = None
         self._kept: dict[Hashable, Any] = {}
         self._lock = threading.RLock()
 
@@ -189,24 +205,43 @@ class Bench:
         edges = base * np.expm1(3.0 * np.arange(self.layers + 1) / self.layers) / np.expm1(3.0)
         mesh = Mesh(edges, self.radius_edges)
         # Rings on the sphere are exact for every width, so no case needs to be asked whether it is wide enough.
-        table = ring_table(self.radius, self.radius_edges, edges, height_m=height, earth="sphere")
+        label = f"cells-{base}-{height}.npy"
+        kernel = self._shelved(label)
+        if kernel is None:
+            table = ring_table(self.radius, self.radius_edges, edges, height_m=height, earth="sphere")
+        else:
+            table = RingTable(self.radius, self.radius_edges, edges, height, "sphere", kernel)
         volume = np.outer(np.diff(edges), np.pi * np.diff(self.radius_edges**2)).ravel()
-        return Cells(mesh, table, volume)
+        return Cells(label, mesh, table, volume)
 
     def fading(self, fresh: CraterModel, case: Scenario) -> Fading:
         """The table that cuts a fresh structure ever deeper, for the case's survey."""
         base, height = _rung(fresh.base), case.model.station_height_m
         spacing = self._spacing(case)
         key = ("fading", base, height, spacing)
-        return self._once(key, 12, lambda: self._make_fading(base, height, self._stencil(spacing)))
+        return self._once(key, 12, lambda: self._make_fading(base, height, spacing))
 
-    def _make_fading(self, base: float, height: float, stencil: Stencil) -> Fading:
+    def _make_fading(self, base: float, height: float, spacing: float) -> Fading:
         layers = CUTS * LAYERS_PER_CUT
         edges = np.linspace(0.0, base, layers + 1)
         # The crossing of a threshold is not sharpened by the curvature of the Earth: the flat table is quicker.
-        kernel = ring_table(self.radius, self.radius_edges, edges, height_m=height).kernel
-        rings = (stencil.response @ kernel.reshape(self.radius.size, -1)).reshape(-1, *kernel.shape[1:])
-        return Fading(Mesh(edges, self.radius_edges), edges[::LAYERS_PER_CUT][:-1], rings)
+        label = f"fading-{base}-{height}-{spacing}.npy"
+        rings = self._shelved(label)
+        if rings is None:
+            stencil = self._stencil(spacing)
+            kernel = ring_table(self.radius, self.radius_edges, edges, height_m=height).kernel
+            rings = (stencil.response @ kernel.reshape(self.radius.size, -1)).reshape(-1, *kernel.shape[1:])
+        return Fading(label, Mesh(edges, self.radius_edges), edges[::LAYERS_PER_CUT][:-1], rings)
+
+    def fill_shelf(self, shelf: Path) -> None:
+        """Write the tables made so far where other processes of this machine can share them."""
+        for made in self._kept.values():
+            if isinstance(made, Cells | Fading):
+                np.save(shelf / made.label, made.table.kernel if isinstance(made, Cells) else made.rings)
+
+    def _shelved(self, label: str) -> Array | None:
+        path = self.shelf / label if self.shelf else None
+        return np.load(path, mmap_mode="r") if path and path.exists() else None
 
     def survey(self, case: Scenario) -> Survey:
         """What a case is seen with: the map's noise and step, or those the case states."""

@@ -168,19 +168,25 @@ class CaseStore:
     def _claim_sweep(self) -> None:
         path = self.folder / HEAD
         former = _tree(path)
-        if former is None:  # new, or cut short by a power failure before any case was done
-            write_text(path, json.dumps(self.head, indent=1, ensure_ascii=False) + "\n")
-            synced(path)
+        difference = ("", None, None) if former is None else _difference(former, json.loads(json.dumps(self.head)))
+        if difference is None:
             return
-        difference = _difference(former, json.loads(json.dumps(self.head)))
-        if difference is not None:
+        if self._begun():
             name, old, new = difference
             raise InputError(
-                name.removeprefix("scenario."),
+                name.removeprefix("scenario.") or "output folder",
                 new,
                 f"was {old} when the sweep in {self.folder} began",
                 "put it back to continue that sweep, or choose another folder with -o",
             )
+        (self.folder / RECORDS).unlink(missing_ok=True)
+        write_text(path, json.dumps(self.head, indent=1, ensure_ascii=False) + "\n")
+        synced(path)
+
+    def _begun(self) -> bool:
+        """Whether the folder holds a case, so that another sweep must not take its place."""
+        journal = self.folder / JOURNAL
+        return (self.folder / CASES).exists() or (journal.exists() and journal.stat().st_size > 0)
 
     def _open_records(self) -> None:
         size = 8 * self.width * self.cases

@@ -8,10 +8,12 @@ from __future__ import annotations
 import contextlib
 import dataclasses
 import os
+import tempfile
 import threading
 import time
 from collections.abc import Iterator
 from concurrent import futures
+from pathlib import Path
 from typing import TYPE_CHECKING, Any, Protocol
 
 import numpy as np
@@ -154,6 +156,7 @@ class DaskExecutor:
 
     def __enter__(self) -> DaskExecutor:
         self._stack = contextlib.ExitStack()
+        self._shelf: Path | None = None
         try:
             self.client = self._stack.enter_context(self._connected())
         except BaseException:
@@ -168,6 +171,7 @@ class DaskExecutor:
         if self.address is None:
             alone = {f"distributed.nanny.pre-spawn-environ.{name}_NUM_THREADS": 1 for name in ("OMP", "MKL", "NUMBA")}
             self._stack.enter_context(dask.config.set(alone))
+            self._shelf = Path(self._stack.enter_context(tempfile.TemporaryDirectory(prefix="gravbasin-")))
             cluster = self._stack.enter_context(
                 LocalCluster(
                     n_workers=self.workers,
@@ -198,6 +202,8 @@ class DaskExecutor:
         """Do the batches on the workers, a few ahead of each."""
         from distributed import as_completed
 
+        if self._shelf is not None:
+            maker_of(recipe).bench.fill_shelf(self._shelf)
         running = as_completed()
         try:
             for task in tasks:
@@ -210,7 +216,9 @@ class DaskExecutor:
             running.clear()
 
     def _submitted(self, recipe: Recipe, task: Task) -> Any:
-        return self.client.submit(_work_alone, recipe, task, pure=False, key=f"cases-{recipe.key[:12]}-{task.first}")
+        return self.client.submit(
+            _work_alone, recipe, task, self._shelf, pure=False, key=f"cases-{recipe.key[:12]}-{task.first}"
+        )
 
     def _result(self, future: Any) -> Done:
         from distributed import KilledWorker
@@ -250,8 +258,9 @@ def _work(recipe: Recipe, task: Task) -> Done:
     return Done(task.first, rows, failed, time.perf_counter() - start)
 
 
-def _work_alone(recipe: Recipe, task: Task) -> Done:
+def _work_alone(recipe: Recipe, task: Task, shelf: Path | None) -> Done:
     """On a dask worker: held to one thread of linear algebra for good, since its threads come and go together."""
+    maker_of(recipe).bench.shelf = shelf
     global _held
     if not _held:
         from threadpoolctl import threadpool_limits

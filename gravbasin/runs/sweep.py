@@ -130,9 +130,8 @@ def _run(plan: Plan, store: CaseStore, executor: Executor, cost: Cost, tell: Pro
         now = time.monotonic()
         if begun is None:  # the first batch also waited for workers to start and to make their tables
             begun, before = now, store.count
-        rate = (
-            (store.count - before) / (now - begun) if store.count > before else executor.workers / cost.seconds_per_case
-        )
+        known = now - begun > 1.0
+        rate = (store.count - before) / (now - begun) if known else executor.workers / cost.seconds_per_case
         text = f"{rate:.3g} cases/s, {duration((store.cases - store.count) / rate)} left"
         tell(text, store.count, store.cases)
         if now - told > LOG_SECONDS or store.count == store.cases:
