@@ -101,7 +101,10 @@ def _numbers(verdict: dict[str, Any]) -> Iterator[str]:
     )
     if "fit" in verdict:
         fit = verdict["fit"]
-        yield f"misfit      chi-square {fit['chi2']:.1f} for {fit['dof']} degrees of freedom, p = {fit['p_value']:.2g}"
+        yield f"fit         posterior predictive p = {fit['p_value']:.2g}, best chi-square {fit['chi2']:.1f} for {fit['dof']}"
+        impact, *others = verdict["rivals"]
+        best = max(others, key=lambda rival: rival["probability"])
+        yield f"rivals      {impact['name']} {impact['probability']:.2g}, best other: {best['name']} {best['probability']:.2g}"
     if "chance" in verdict:
         chance = verdict["chance"]
         yield (

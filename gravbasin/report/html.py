@@ -9,7 +9,15 @@ from gravbasin.crater import rivals_of
 from gravbasin.inference.bank import ImpactFamily
 from gravbasin.report import sentences
 from gravbasin.report.figures import TITLES, assessment_figures
-from gravbasin.report.tables import audit_rows, candidate_rows, dimension_rows, key_numbers, noise_rows, rival_rows
+from gravbasin.report.tables import (
+    audit_rows,
+    candidate_rows,
+    dimension_rows,
+    key_numbers,
+    mark_rows,
+    noise_rows,
+    rival_rows,
+)
 
 if TYPE_CHECKING:
     from jinja2 import Template
@@ -48,6 +56,7 @@ def assessment_report(result: Assessment) -> tuple[str, dict[str, str]]:
         rivals=rival_rows(verdict, rivals_of(scenario)) if compared else [],
         identifiability=sentences.identifiability(verdict, ImpactFamily(scenario).ranges) if compared else "",
         roundness=sentences.roundness(verdict) if compared else "",
+        marks=mark_rows(verdict),
         candidates=candidate_rows(verdict),
         titles=TITLES,
         drawings=drawings,

@@ -107,7 +107,15 @@ def roundness(verdict: Verdict) -> str:
             f"{result} The anomaly is less round than the noise explains, most of all {shapes[strongest]}: tilt, "
             "uneven erosion or a neighbouring body may have bent it, or it is no circle."
         )
-    return f"{result} Nothing speaks against a round anomaly."
+    return f"{result} Nothing speaks against a round anomaly.{_elongation(c)}"
+
+
+def _elongation(circularity: Mapping[str, Any]) -> str:
+    """How long it is for its width, where that was measured."""
+    value, error = circularity.get("elongation"), circularity.get("elongation_error")
+    if value is None or error is None:
+        return ""
+    return f" Elongation, long axis over short less one: {number(value, 2)} ± {number(error, 2)}."
 
 
 def noise_origin(verdict: Verdict) -> str:

@@ -10,7 +10,16 @@ from gravbasin.crater import CraterDimensions, Rival
 from gravbasin.report.words import given, number, percent, plus_minus, probability, signed
 from gravbasin.runs.section_run import dimension_table
 
-__all__ = ["Row", "audit_rows", "candidate_rows", "dimension_rows", "key_numbers", "noise_rows", "rival_rows"]
+__all__ = [
+    "Row",
+    "audit_rows",
+    "candidate_rows",
+    "dimension_rows",
+    "key_numbers",
+    "mark_rows",
+    "noise_rows",
+    "rival_rows",
+]
 
 Verdict = Mapping[str, Any]
 
@@ -21,6 +30,24 @@ class Row(NamedTuple):
     quantity: str
     value: str
     meaning: str = ""
+
+
+def mark_rows(verdict: Verdict) -> list[Row]:
+    """Marks of shape that published work names: value with its 90 % limits, and what the families would show."""
+    rows = []
+    for mark in verdict.get("marks", []):
+        unit = "" if mark["unit"] == "1" else f" {mark['unit']}"
+        value = "not measurable"
+        if mark["value"] is not None:
+            value = f"{number(mark['value'], 2)}{unit}{_limits(mark, unit)}"
+        rows.append(Row(mark["name"], value, mark["meaning"].removeprefix("not measurable: ")))
+    return rows
+
+
+def _limits(mark: Mapping[str, Any], unit: str) -> str:
+    if mark["low"] is None or mark["high"] is None:
+        return ""
+    return f" ({number(mark['low'], 2)} to {number(mark['high'], 2)}{unit})"
 
 
 def key_numbers(verdict: Verdict) -> dict[str, list[Row]]:

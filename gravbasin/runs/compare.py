@@ -15,6 +15,7 @@ from gravbasin.inference.circularity import Circularity
 from gravbasin.inference.detect import Detectability, detectability, signal_band
 from gravbasin.inference.evidence import Fit, Level, Posterior, predictive_fit
 from gravbasin.inference.likelihood import RingLikelihood, ring_likelihood, shape_scatter
+from gravbasin.inference.marks import Mark, shape_marks
 from gravbasin.inference.response import ring_response
 from gravbasin.observed import (
     NoiseCheck,
@@ -70,6 +71,8 @@ class Comparison:
         The impact family first, then its rivals; the last is regional noise alone.
     fit : Fit
         How well the impact family agrees with the map.
+    marks : tuple of Mark
+        Wall dip, central high and the like, for the reader: the evidence holds the profile already.
     places : Places
         What other places of the map say.
     maps : Dataset (northing, easting)
@@ -89,6 +92,7 @@ class Comparison:
     amplitude_error: float
     posteriors: tuple[Posterior, ...]
     fit: Fit
+    marks: tuple[Mark, ...]
     places: Places
     maps: xr.Dataset
 
@@ -171,6 +175,7 @@ def compare_with_map(
         bank,
         likelihoods[0],
         response,
+        profile=(modelled.radius, modelled.profile),
         diameter=_diameter(scenario),
         resolution=_resolution(scenario),
         centres=scenario.inference.chance_centres,
@@ -180,6 +185,15 @@ def compare_with_map(
     posteriors = compare_families(scenario, bank, response, likelihoods, rings.mean, places.level)
     impact = posteriors[0]
     impact_rings = response @ impact.bank.profiles.T
+    marks = shape_marks(
+        rings,
+        likelihoods,
+        posteriors,
+        response,
+        rim_radius_m=0.5 * KM * impact.interval("rim_diameter_km")[0],
+        level=places.level,
+        seed=scenario.seed,
+    )
     predicted = impact.quantiles(impact_rings, [0.5, 0.05, 0.95])
     exclude = _mask(scenario)
     return Comparison(
@@ -198,6 +212,7 @@ def compare_with_map(
         amplitude_error=amplitude_error,
         posteriors=posteriors,
         fit=predictive_fit(likelihoods[0], impact_rings, rings.mean, impact.weights, places.level),
+        marks=marks,
         places=places,
         maps=_maps(observed, noise, modelled, np.hypot(easting, northing[:, None]), exclude),
     )

@@ -65,6 +65,7 @@ def places_of(
     likelihood: RingLikelihood,
     response: Array,
     *,
+    profile: tuple[Array, Array],
     diameter: float,
     resolution: float | None,
     centres: int,
@@ -84,6 +85,8 @@ def places_of(
         Impact structures drawn from the prior.
     likelihood, response
         Of the structure's own rings, which may be incomplete or off the nodes.
+    profile : (radius, anomaly), m and mGal
+        Of the scenario's structure: elongation is measured against it.
     diameter : float, m
         Places nearer to the structure than this are no chance.
     resolution : float or None, m
@@ -119,8 +122,9 @@ def places_of(
         np.flatnonzero(elsewhere), min(ROUNDNESS_PLACES, int(elsewhere.sum())), replace=False
     )
     node = (int(np.argmin(np.abs(north - rings.centre[1]))), int(np.argmin(np.abs(east - rings.centre[0]))))
-    harmonics = Harmonics.build(rings.edges_m, rings.spacing_m, noise)
-    circularity = circularity_test(observed, harmonics, node, (rows[picked], columns[picked]))
+    harmonics = Harmonics.build(rings.edges_m, rings.spacing_m, noise, resolution=resolution)
+    others = (rows[picked], columns[picked])
+    circularity = circularity_test(observed, harmonics, node, others, level=level, profile=profile)
     return dataclasses.replace(places, chance=chance, circularity=circularity)
 
 

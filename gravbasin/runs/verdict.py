@@ -101,6 +101,7 @@ def _map_results(scenario: Scenario, comparison: Comparison) -> dict[str, Any]:
             for name in ("rim_diameter_km", "erosion_km", "moho_uplift_km", "excess_mass_kg")
         },
         "rivals": _rival_table(scenario, comparison),
+        "marks": [dataclasses.asdict(mark) for mark in comparison.marks],
         "local_noise_level": dataclasses.asdict(comparison.level),
     }
     chance, circularity = comparison.chance, comparison.circularity
