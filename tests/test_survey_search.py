@@ -71,9 +71,9 @@ def test_ranking_reports_the_signal_to_noise_of_the_stations_chosen():
         np.concatenate([first.error, candidates.error[found.chosen]]),
     )
     gram = station_sight(joined, CURVES, [NOISE]).gram[0]
-    response = robust_gram(gram, SCATTER) @ MODEL
-    expected = response @ MODEL / np.sqrt(response @ MODEL - np.sum((SCATTER.T @ response) ** 2))
+    expected = np.sqrt(MODEL @ robust_gram(gram, SCATTER) @ MODEL)
     np.testing.assert_allclose(found.snr[-1], expected, rtol=1e-3)
+    np.testing.assert_allclose(np.diff(found.snr**2), found.gain, rtol=1e-6)
     assert np.isnan(found.rival_distance).all()
 
 

@@ -74,7 +74,7 @@ def error_terms(errors: StationErrors, *, latitude: float | None = None) -> tupl
         ErrorTerm("tide", errors.tide_mgal, "as stated"),
         ErrorTerm("tie", errors.tie_mgal, "as stated"),
         ErrorTerm("height", abs(per_metre) * errors.height_m, f"{per_metre:.4f} mGal/m × {errors.height_m:g} m"),
-        ErrorTerm("northing", along * errors.position_m, f"{along:.6f} mGal/m × {errors.position_m:g} m at {phi:.3g}°"),
+        ErrorTerm("northing", along * errors.position_m, f"{along:.6f} mGal/m × {errors.position_m:g} m at {latitude_name(phi)}"),
         ErrorTerm("terrain correction", errors.terrain_mgal, "as stated"),
         ErrorTerm(
             "slab density",
@@ -82,6 +82,11 @@ def error_terms(errors: StationErrors, *, latitude: float | None = None) -> tupl
             f"{SLAB:g} × {errors.relief_m:g} m of relief × {errors.density_kg_m3 / 1000.0:g} g/cm³",
         ),
     )
+
+
+def latitude_name(degrees: float) -> str:
+    """A latitude as people write it, 26.8° S."""
+    return f"{abs(degrees):.3g}° {'N' if degrees >= 0 else 'S'}"
 
 
 def station_error(terms: tuple[ErrorTerm, ...]) -> float:

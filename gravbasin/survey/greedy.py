@@ -36,7 +36,7 @@ class Ranking:
         What each adds to the squared distance that was aimed for: of the model to nothing (detection) or to the
         nearest rival (telling apart), with the scatter of shape counted as noise.
     snr : (1 + count,) array
-        Signal-to-noise ratio before any and after each.
+        Signal-to-noise ratio before any and after each, the scatter of shape counted as noise: it never falls.
     rival_distance : (1 + count,) array
         Distance to the nearest rival, looked for anew every few stations; NaN without rivals.
     """
@@ -206,7 +206,4 @@ def _aim(state: _State, stakes: Stakes, tell_apart: bool) -> tuple[Array, float]
 
 
 def _snr(state: _State, stakes: Stakes) -> float:
-    response = state.gram() @ stakes.model
-    power = float(stakes.model @ response)
-    noise = power - float(np.sum((stakes.scatter.T @ response) ** 2))
-    return power / float(np.sqrt(noise)) if noise > 0.0 else 0.0
+    return float(np.sqrt(max(float(stakes.model @ state.gram() @ stakes.model), 0.0)))

@@ -166,7 +166,7 @@ def prepare(
     worn = worn_structures(scenario, radius)
     diameters = np.geomspace(sizes.low, sizes.high, survey.chart_diameters)
     chart = tuple(
-        worn_structures(scenario, radius, rim_diameter_km=float(d), erosion_km=worn.erosion_km, draws=8)
+        worn_structures(scenario, radius, rim_diameter_km=float(d), erosion_km=worn.erosion_km, draws=12)
         for d in diameters
     )
     everything = [templates, impacts.profiles.T, *(b.profiles.T for b, _ in banks.values())]

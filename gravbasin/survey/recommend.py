@@ -74,7 +74,7 @@ def recommend(
         count = len(quest.site.existing)
         text = f"The {count} existing stations already meet the goal ({_merit(quest, existing)}): no new one is needed."
         return Recommendation("existing stations suffice", None, None, text)
-    good = {key: cell for key, cell in cells.items() if meets(quest, *reached(quest, cell))}
+    good = {key: cell for key, cell in cells.items() if _meets_closer_too(quest, cells, key)}
     within = {key: cell for key, cell in good.items() if affordable(quest, cell.effort)}
     if within:
         key = min(within, key=lambda k: _price(within[k].effort))
@@ -98,6 +98,13 @@ def recommend(
         f"{_merit(quest, ceiling)}: a wider area, finer spacing or better stations might. {best}"
     )
     return Recommendation("beyond the spacings tried", *nearest, text)
+
+
+def _meets_closer_too(quest: Quest, cells: dict[tuple[str, float], Cell], key: tuple[str, float]) -> bool:
+    """Whether a cell meets the goal, and so does the next closer spacing: one may do well by lucky places alone."""
+    closer = [spacing for layout, spacing in cells if layout == key[0] and spacing < key[1]]
+    tried = [key, (key[0], max(closer))] if closer else [key]
+    return all(meets(quest, *reached(quest, cells[each])) for each in tried)
 
 
 def goal(quest: Quest) -> str:

@@ -28,11 +28,14 @@ class Rule:
         The widest spacing it allows here.
     source : str
         Where it comes from.
+    short : str
+        A few words for a figure.
     """
 
     name: str
     spacing_m: float
     source: str
+    short: str
 
 
 def source_depth(scenario: Scenario) -> float:
@@ -47,8 +50,8 @@ def rules_of(scenario: Scenario) -> tuple[Rule, ...]:
     """The rules a planner will have heard of, worked out for this structure."""
     depth = source_depth(scenario)
     return (
-        Rule("no wider than the depth of the source", depth, "common practice"),
-        Rule("no wider than twice that depth", 2.0 * depth, "Reid 1980, from memory: aliasing of the field"),
+        Rule("no wider than the depth of the source", depth, "common practice", "source depth"),
+        Rule("no wider than twice that depth", 2.0 * depth, "Reid 1980, from memory", "twice the source depth"),
     )
 
 
@@ -73,5 +76,5 @@ def _judged(rule: Rule, needed: float | None, finest: float, layout: str) -> str
     if 0.8 <= ratio <= 1.25:
         return f"{start}, and it agrees: {found}."
     if ratio > 1.0:
-        return f"{start}; {found}, so the rule asks for {ratio**2:.2g} times the stations needed."
+        return f"{start}; {found}, so for this goal the rule asks for {ratio**2:.2g} times the stations needed."
     return f"{start}; {found}, so the rule misleads: a survey by it would miss the goal."
