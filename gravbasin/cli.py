@@ -101,10 +101,16 @@ def _numbers(verdict: dict[str, Any]) -> Iterator[str]:
     )
     if "fit" in verdict:
         fit = verdict["fit"]
-        yield f"fit         posterior predictive p = {fit['p_value']:.2g}, best chi-square {fit['chi2']:.1f} for {fit['dof']}"
+        yield (
+            f"fit         posterior predictive p = {fit['p_value']:.2g}, "
+            f"best chi-square {fit['chi2']:.1f} for {fit['dof']} degrees of freedom"
+        )
         impact, *others = verdict["rivals"]
         best = max(others, key=lambda rival: rival["probability"])
-        yield f"rivals      {impact['name']} {impact['probability']:.2g}, best other: {best['name']} {best['probability']:.2g}"
+        yield (
+            f"rivals      {impact['name']} {impact['probability']:.2g}, "
+            f"best other: {best['name']} {best['probability']:.2g}"
+        )
     if "chance" in verdict:
         chance = verdict["chance"]
         yield (

@@ -107,7 +107,7 @@ def test_with_a_map_everything_is_there_in_order(compared, pages) -> None:
     assert sorted(figures) == sorted(FIGURES)
     heads = [attrs["id"] for tag, attrs in page.tags if tag in ("h1", "h2") and "id" in attrs]
     assert heads == [
-        "verdict", "cautions", "untested", "numbers", *HEADS[:3], "rivals", HEADS[3], "roundness", *HEADS[4:],
+        "verdict", "cautions", "untested", "numbers", *HEADS[:3], "rivals", HEADS[3], "roundness", "marks", *HEADS[4:],
         "dimensions", "noise", "audit", "provenance",
     ]  # fmt: skip
     assert compared.verdict["statement"] in page.text
