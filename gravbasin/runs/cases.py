@@ -30,7 +30,8 @@ Array = NDArray[np.float64]
 KM = 1000.0
 
 STREAM = 21
-"""Stream of the scenario's seed for the scatter of a case; its number is the third part of the seed."""
+"""Stream of the scenario's seed for the scatter of a case; its number is the third part of the seed. The cases about
+one base point of a Saltelli sample share theirs, so that scatter does not pass for the effect of a field."""
 
 MODELS_AT_ONCE = 288
 
@@ -165,7 +166,8 @@ class CaseMaker:
 
     def _case(self, number: int, code: Array) -> _Case:
         scenario = self.variants.scenario([axis.value(float(c)) for axis, c in zip(self.axes, code, strict=True)])
-        rng = np.random.default_rng([self.recipe.scenario.seed, STREAM, number])
+        shared = len(self.axes) + 2 if self.sweep.design == "saltelli" else 1
+        rng = np.random.default_rng([self.recipe.scenario.seed, STREAM, number // shared])
         draws = (crater_model(scenario, rng) for _ in range(self.sweep.draws))
         return _Case(number, scenario, (crater_model(scenario), *draws))
 

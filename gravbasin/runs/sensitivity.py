@@ -20,7 +20,7 @@ GROUPS = 32
 """Groups left out in turn for the standard errors."""
 
 LEAST_CASES = 128
-MOST_LEVELS, BINS = 24, 12
+MOST_LEVELS, BINS = 24, 10
 
 
 @dataclasses.dataclass(frozen=True)

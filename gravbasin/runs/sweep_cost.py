@@ -95,7 +95,7 @@ def cost_of(plan: Plan, executor: Executor) -> Cost:
 
 def _measured(plan: Plan) -> tuple[float, float]:
     """Seconds per case on one worker, tables made; and the seconds spent on the timed samples."""
-    maker, size, spent, count = plan.maker, plan.design.size, 0.0, 4
+    maker, size, spent, count = plan.maker, plan.design.size, 0.0, 8
     reasons: dict[int, str] = {}
     while True:
         numbers = np.unique(np.linspace(0, size - 1, count).round().astype(int))
@@ -105,9 +105,9 @@ def _measured(plan: Plan) -> tuple[float, float]:
         _, reasons = maker.rows(0, codes)
         last = time.perf_counter() - start
         spent += last
-        if last > 0.25 or len(numbers) == size or count >= 256:
+        if last > 0.1 or len(numbers) == size or count >= 64:
             break
-        count *= 4
+        count *= 8
     if len(reasons) == len(codes):
         raise InputError(
             "sweep",
