@@ -9,7 +9,7 @@ import numpy as np
 import xarray as xr
 from cmcrameri import cm
 from matplotlib.patheffects import withStroke
-from matplotlib.ticker import FixedLocator, FuncFormatter, NullLocator
+from matplotlib.ticker import FixedLocator, FuncFormatter, MaxNLocator, NullLocator
 
 from gravbasin.report.canvas import (
     BAND,
@@ -84,6 +84,10 @@ def stations_figure(
     values = np.interp(np.hypot(x, y[:, None]).ravel() * KM, radius, profile, right=0.0).reshape(240, 240)
     limit = round_limit(profile)
     mesh = axes.pcolormesh(x, y, values, cmap=cm.vik, vmin=-limit, vmax=limit, shading="nearest", rasterized=True)
+    levels = [v for v in MaxNLocator(8).tick_values(-limit, limit) if v and profile.min() < v < profile.max()]
+    if levels:  # dashed below zero, so that the sign survives in grey
+        lines = axes.contour(x, y, values, levels=levels, colors=INK, linewidths=0.5, negative_linestyles="dashed")
+        lines.set_rasterized(True)
     for polygon in site.area:
         for ring in polygon:
             _outline(axes, (ring - site.centre) / KM, color=INK, linewidth=1.1)
@@ -147,7 +151,7 @@ def merit_figure(
     _curves(upper, table, seen, band)
     _curves(lower, table, "rival_distance", ("rival_distance_low", "rival_distance_high"))
     upper.set(ylim=(0, 1.03))
-    lower.set(ylim=(0, 1.06 * max(distance, ceiling[1], float(table.rival_distance_high.max()))))
+    lower.set(ylim=(0, 1.06 * float(np.nanmax([distance, ceiling[1], float(table.rival_distance_high.max())]))))
     for axes, goal, top in ((upper, target, ceiling[0]), (lower, distance, ceiling[1])):
         axes.axhline(goal, color=INK, linewidth=1.1)
         axes.axhline(top, color=QUIET, linewidth=1.1, linestyle=(0, (6, 3)))
@@ -274,7 +278,7 @@ def _clocks(figure: Figure, axes: Axes, rates: dict[str, float], last: float) ->
         clock.xaxis.tick_top()
         clock.tick_params(labelsize=SMALL, color=QUIET, width=0.7, length=3, labelleft=False, left=False)
         label = f"million years at {rate:g} m/Myr ({name})"
-        figure.text(box.x1, box.y1 + 0.048 + 0.078 * number, label, fontsize=SMALL, color=QUIET, ha="right")
+        figure.text(box.x1, box.y1 + 0.056 + 0.078 * number, label, fontsize=SMALL, color=QUIET, ha="right")
 
 
 def chart_figure(chart: Chart, *, probability: float, today: tuple[float, float]) -> Figure:

@@ -22,6 +22,7 @@ from gravbasin.report.plan_figures import (
 from gravbasin.report.tables import Row
 from gravbasin.report.words import given, number, probability, signed
 from gravbasin.runs.plan_run import CAUTIONS
+from gravbasin.scenario import StationErrors
 from gravbasin.survey.recommend import affordable, goal, meets, reached
 from gravbasin.survey.vanish import CAUSES
 
@@ -184,12 +185,12 @@ def _gain(result: Planned) -> Drawing:
     beyond = "the existing stations" if len(result.prepared.quest.site.existing) else "the recommended layout"
     total = float(ranking.gain.sum())
     half = int(np.searchsorted(np.cumsum(ranking.gain), 0.5 * total)) + 1
+    first = "first" if half == 1 else f"first {half}"
     return _drawing(
         gain_figure(ranking.snr, ranking.rival_distance, beyond=beyond),
         "gain",
         f"Single places, each the best beyond {beyond} and those before it, under the best noise model. Half of the "
-        f"gain of all {ranking.gain.size} comes with the first{'' if half == 1 else f' {half}'}. Chosen one by one, which need not be the best "
-        "set.",
+        f"gain of all {ranking.gain.size} comes with the {first}. Chosen one by one, which need not be the best set.",
         f"Signal-to-noise ratio from {ranking.snr[0]:.2g} to {ranking.snr[-1]:.2g} with {ranking.gain.size} stations.",
     )
 
@@ -199,7 +200,7 @@ def cost_rows(result: Planned) -> list[CostRow]:
     quest = result.prepared.quest
     rows = []
     for (layout, spacing), cell in sorted(
-        result.cells.items(), key=lambda item: (result.survey.layouts.index(item[0][0]), -item[0][1])  # type: ignore[arg-type]
+        result.cells.items(), key=lambda item: (result.survey.layouts.index(item[0][0]), -item[0][1])
     ):
         seen, distance = reached(quest, cell)
         good, paid = meets(quest, seen, distance), affordable(quest, cell.effort)
@@ -313,8 +314,7 @@ def _assumptions(result: Planned) -> list[str]:
         "Distances are straight lines from station to station; real ways are longer. Stations where nobody can stand "
         "must be moved, which costs little as long as they stay within a quarter of the spacing.",
         "Centre and size count as known." if survey.place == "given" else "Centre and size count as searched for over "
-        f"the area and the prior's diameters: {number(result.cells[min(result.cells, key=lambda k: k[1])].trials, 2)} "
-        "trials at the closest spacing.",
+        f"the area and the prior's diameters: {number(result.ceiling.trials, 2)} trials at the closest spacing.",
         "Details of shape that the scatter of the size laws blurs count as noise, so a sharply modelled rim proves "
         "nothing.",
         *(
@@ -326,9 +326,15 @@ def _assumptions(result: Planned) -> list[str]:
 
 
 def _defaults(result: Planned) -> list[str]:
-    stated = result.survey.errors.model_fields_set
-    fields = type(result.survey.errors).model_fields
-    return [name.rpartition("_")[0].replace("_", " ") for name in fields if name not in stated]
+    errors, usual = result.survey.errors, StationErrors()
+    same = [name for name in type(errors).model_fields if getattr(errors, name) == getattr(usual, name)]
+    return [_ERROR_NAMES[name] for name in same if name in _ERROR_NAMES]
+
+
+_ERROR_NAMES = {
+    "meter_mgal": "meter", "drift_mgal": "drift", "tide_mgal": "tide", "tie_mgal": "tie", "height_m": "height",
+    "position_m": "position", "terrain_mgal": "terrain", "density_kg_m3": "slab density", "relief_m": "relief",
+}  # fmt: skip
 
 
 def _coordinates(result: Planned) -> str:

@@ -205,7 +205,7 @@ def _check_room(survey: Survey, site: Any, spacings: Array) -> None:
         for layout in survey.layouts
         for spacing in spacings
     }  # fmt: skip
-    if not any(counts.values()):
+    if not any(counts.values()) and not len(site.existing):
         raise InputError(
             "survey.area", f"{site.size / KM**2:.3g} km²", "has no room for a single new station at any spacing",
             "widen it, shrink survey.no_go, or use narrower survey.spacings_km",
@@ -227,7 +227,9 @@ def _judged(
     cells = sweep(quest, spacings, progress=stage)
     nothing = np.zeros((0, 2))
     existing = evaluate(quest, nothing) if len(quest.site.existing) else None
-    ceiling = _ceiling(quest, cells)
+    finest = cells[min(cells, key=lambda key: key[1])] if cells else existing
+    assert finest is not None  # an area without room is refused unless stations exist
+    ceiling = _ceiling(quest, finest)
     recommendation = recommend(quest, cells, ceiling, existing)
     taken = recommendation.layout is not None and recommendation.spacing_m is not None
     chosen = cells[str(recommendation.layout), float(recommendation.spacing_m or 0.0)] if taken else existing
@@ -274,9 +276,8 @@ def _judged(
     )
 
 
-def _ceiling(quest: Quest, cells: dict[tuple[str, float], Cell]) -> Cell:
+def _ceiling(quest: Quest, finest: Cell) -> Cell:
     """An endless survey without station errors; its thresholds are those of the closest layout tried."""
-    finest = cells[min(cells, key=lambda key: key[1])]
     return dataclasses.replace(
         finest,
         points=np.zeros((0, 2)),
@@ -302,9 +303,7 @@ def _ranked(quest: Quest, chosen: Cell, finest: float) -> tuple[Ranking | None, 
     candidates = Stations(places - site.centre, np.full(len(places), quest.station_error))
     first = stations_of(quest, np.zeros((0, 2)) if len(site.existing) else chosen.points)
     tell_apart = survey.goal == "tell apart"
-    ranking = next_best(
-        first, candidates, quest.stakes, quest.noises[0], count=survey.next_best, tell_apart=tell_apart
-    )
+    ranking = next_best(first, candidates, quest.stakes, quest.noises[0], count=survey.next_best, tell_apart=tell_apart)
     return ranking, places
 
 

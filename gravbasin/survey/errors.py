@@ -74,7 +74,11 @@ def error_terms(errors: StationErrors, *, latitude: float | None = None) -> tupl
         ErrorTerm("tide", errors.tide_mgal, "as stated"),
         ErrorTerm("tie", errors.tie_mgal, "as stated"),
         ErrorTerm("height", abs(per_metre) * errors.height_m, f"{per_metre:.4f} mGal/m × {errors.height_m:g} m"),
-        ErrorTerm("northing", along * errors.position_m, f"{along:.6f} mGal/m × {errors.position_m:g} m at {latitude_name(phi)}"),
+        ErrorTerm(
+            "northing",
+            along * errors.position_m,
+            f"{along:.6f} mGal/m × {errors.position_m:g} m at {latitude_name(phi)}",
+        ),
         ErrorTerm("terrain correction", errors.terrain_mgal, "as stated"),
         ErrorTerm(
             "slab density",

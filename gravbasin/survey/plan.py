@@ -11,7 +11,6 @@ import xarray as xr
 from numpy.typing import NDArray
 from scipy import stats
 
-from gravbasin.errors import InputError
 from gravbasin.inference.detect import detection_probability, signal_band
 from gravbasin.observed import NoiseModel
 from gravbasin.scenario import Scenario, Survey
@@ -135,13 +134,7 @@ def evaluate(quest: Quest, points: Array) -> Cell:
 def sweep(
     quest: Quest, spacings: Array, *, progress: Callable[[str], None] = lambda stage: None
 ) -> dict[tuple[str, float], Cell]:
-    """Every layout at every spacing, m; cells without room for a new station are left out.
-
-    Raises
-    ------
-    InputError
-        No layout has room for a single station at any spacing.
-    """
+    """Every layout at every spacing, m; cells without room for a new station are left out."""
     cells: dict[tuple[str, float], Cell] = {}
     for layout in quest.survey.layouts:
         progress(f"judging layouts: {layout}")
@@ -149,11 +142,6 @@ def sweep(
             points = new_stations(quest, layout, float(spacing))
             if len(points):
                 cells[layout, float(spacing)] = evaluate(quest, points)
-    if not cells:
-        raise InputError(
-            "survey.area", "no place free", "must have room for at least one new station",
-            "widen the area, shrink survey.no_go, or use narrower survey.spacings_km",
-        )  # fmt: skip
     return cells
 
 

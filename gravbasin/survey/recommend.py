@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from gravbasin.errors import InputError
 from gravbasin.survey.costs import Effort
 from gravbasin.survey.merit import Merit
 from gravbasin.survey.plan import Cell, Quest
@@ -69,19 +70,32 @@ def recommend(
         An endless survey without station errors, each threshold as for the finest cell.
     existing : Cell, optional
         The existing stations alone.
+
+    Raises
+    ------
+    InputError
+        There is no room for a new station, and the existing ones do not meet the goal.
     """
     if existing is not None and meets(quest, *reached(quest, existing)):
         count = len(quest.site.existing)
         text = f"The {count} existing stations already meet the goal ({_merit(quest, existing)}): no new one is needed."
         return Recommendation("existing stations suffice", None, None, text)
+    if not cells:
+        raise InputError(
+            "survey.area", f"{quest.site.size / KM**2:.3g} km²",
+            "has no room for a single new station at any spacing beside the existing ones",
+            "widen it, shrink survey.no_go, or use narrower survey.spacings_km",
+        )  # fmt: skip
     good = {key: cell for key, cell in cells.items() if _meets_closer_too(quest, cells, key)}
     within = {key: cell for key, cell in good.items() if affordable(quest, cell.effort)}
     if within:
         key = min(within, key=lambda k: _price(within[k].effort))
         text = f"Cheapest that meets the goal: {_named(quest, key, within[key])}."
         return Recommendation("found", *key, text)
-    nearest = _nearest(quest, {k: c for k, c in cells.items() if affordable(quest, c.effort)} or cells)
-    best = f"Nearest to it{_within(quest)}: {_named(quest, nearest, cells[nearest])}."
+    paid = {key: cell for key, cell in cells.items() if affordable(quest, cell.effort)}
+    nearest = _nearest(quest, paid or cells)
+    place = _within(quest) if paid else ", though no layout tried is within the budget"
+    best = f"Nearest to it{place}: {_named(quest, nearest, cells[nearest])}."
     if good:
         key = min(good, key=lambda k: _price(good[k].effort))
         text = f"The goal is beyond the budget: the cheapest that meets it is {_named(quest, key, good[key])}. {best}"

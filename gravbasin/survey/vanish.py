@@ -7,6 +7,7 @@ from collections.abc import Sequence
 
 import numpy as np
 from numpy.typing import NDArray
+from threadpoolctl import threadpool_limits
 
 from gravbasin.crater import EROSION_RATES, PARTS, CraterModel, contrast, contrast_parts, crater_model, shared_mesh
 from gravbasin.crater.model import ground_of
@@ -183,7 +184,9 @@ def vanishing_erosion(
         sight = ring_sight(response, covariances, regional)
         verdict["detectability"]["vanishing_erosion_km"] = vanishing_erosion(scenario, sight, radius).as_dict()
     """
-    return vanishing_of(scenario, worn_structures(scenario, radius, draws=draws), sight, None, threshold=threshold)
+    # Many small matrices: on a busy machine, threads that wait for each other make them ten times slower.
+    with threadpool_limits(1):
+        return vanishing_of(scenario, worn_structures(scenario, radius, draws=draws), sight, None, threshold=threshold)
 
 
 def vanishing_of(
