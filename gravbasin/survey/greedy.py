@@ -7,6 +7,7 @@ import dataclasses
 import numpy as np
 from numpy.typing import NDArray
 from scipy import linalg
+from threadpoolctl import threadpool_limits
 
 from gravbasin.errors import CannotFinish
 from gravbasin.observed import NoiseModel, polynomial_basis
@@ -173,6 +174,13 @@ def next_best(
     """
     if len(first.place) > MOST_STATIONS:
         raise CannotFinish(f"{len(first.place)} existing stations are more than {MOST_STATIONS}; thin them first")
+    with threadpool_limits(1):  # small matrices: waiting threads would cost more than they give
+        return _ranked(first, candidates, stakes, noise, count, tell_apart)
+
+
+def _ranked(
+    first: Stations, candidates: Stations, stakes: Stakes, noise: NoiseModel, count: int, tell_apart: bool
+) -> Ranking:
     count = min(count, len(candidates.place))
     state = _State(first, candidates, stakes, noise, count)
     tell_apart = tell_apart and bool(stakes.rivals)

@@ -10,6 +10,7 @@ import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
 from scipy import stats
+from threadpoolctl import threadpool_limits
 
 from gravbasin.inference.detect import detection_probability, signal_band
 from gravbasin.observed import NoiseModel
@@ -136,12 +137,13 @@ def sweep(
 ) -> dict[tuple[str, float], Cell]:
     """Every layout at every spacing, m; cells without room for a new station are left out."""
     cells: dict[tuple[str, float], Cell] = {}
-    for layout in quest.survey.layouts:
-        progress(f"judging layouts: {layout}")
-        for spacing in spacings:
-            points = new_stations(quest, layout, float(spacing))
-            if len(points):
-                cells[layout, float(spacing)] = evaluate(quest, points)
+    with threadpool_limits(1):  # hundreds of small matrices: waiting threads would cost more than they give
+        for layout in quest.survey.layouts:
+            progress(f"judging layouts: {layout}")
+            for spacing in spacings:
+                points = new_stations(quest, layout, float(spacing))
+                if len(points):
+                    cells[layout, float(spacing)] = evaluate(quest, points)
     return cells
 
 
