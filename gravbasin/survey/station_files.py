@@ -72,7 +72,7 @@ class StationTable:
             found["longitude"] = np.round(self.degrees[:, 0], 7).tolist()
             found["latitude"] = np.round(self.degrees[:, 1], 7).tolist()
         found["distance_km"] = np.round(self.distance_km, 3).tolist()
-        found["modelled_mgal"] = np.round(self.modelled_mgal, 3).tolist()
+        found["modelled_mgal"] = (np.round(self.modelled_mgal, 3) + 0.0).tolist()  # no minus before a zero
         found["gain"] = [None if np.isnan(g) else round(float(g), 5) for g in self.gain]
         return found
 
