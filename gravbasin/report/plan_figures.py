@@ -102,7 +102,8 @@ def stations_figure(
     for kind, look in STATION_LOOKS.items():
         at = (stations.place[kinds == kind] - site.centre) / KM
         if len(at):
-            axes.scatter(*at.T, label=f"{kind} ({len(at)})", **look)
+            crowded = 0.4 if len(at) > 400 else 1.0
+            axes.scatter(*at.T, label=f"{kind} ({len(at)})", **{**look, "s": crowded * look["s"]})
     axes.set(xlim=(west, east), ylim=(south, north), aspect="equal")
     tidy(axes, x=AXIS_LABELS[0], y=AXIS_LABELS[1])
     if len(stations.place):
@@ -144,8 +145,8 @@ def merit_figure(
     chosen : (layout, spacing) or None
         The recommended cell.
     """
-    figure = blank_figure(6.9)
-    upper, lower = figure.add_axes((0.085, 0.555, 0.68, 0.405)), figure.add_axes((0.085, 0.085, 0.68, 0.405))
+    figure = blank_figure(7.2)
+    upper, lower = figure.add_axes((0.085, 0.57, 0.70, 0.395)), figure.add_axes((0.085, 0.12, 0.70, 0.395))
     seen = "detection_probability_searched" if searched else "detection_probability"
     band = None if searched else ("detection_low", "detection_high")
     _curves(upper, table, seen, band)
@@ -165,7 +166,10 @@ def merit_figure(
     tidy(upper, y="detection probability", title=f"Seen? ({where})")
     tidy(lower, x="station spacing along rows (km)", y="distance, standard errors", title="Told from its rivals?")
     upper.tick_params(labelbottom=False)
-    upper.legend(loc="upper left", bbox_to_anchor=(1.02, 0.62), fontsize=SMALL, frameon=False, handlelength=3.2)
+    figure.legend(
+        *upper.get_legend_handles_labels(), loc="lower left", bbox_to_anchor=(0.07, 0.0), ncols=5, fontsize=SMALL,
+        frameon=False, handlelength=3.2,
+    )  # fmt: skip
     return figure
 
 

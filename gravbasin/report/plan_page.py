@@ -344,4 +344,5 @@ def _coordinates(result: Planned) -> str:
             "The survey's reference system is not known (survey.crs), so stations.csv holds eastings and northings "
             "only, without degrees, and no stations.geojson was written."
         )
-    return f"stations.csv holds eastings and northings in {crs.name} and degrees; stations.geojson is in degrees."
+    name = "the map's own system" if crs.name.lower() in ("unknown", "") else crs.name
+    return f"stations.csv holds eastings and northings in {name} and degrees; stations.geojson is in degrees."
