@@ -99,6 +99,8 @@ def _numbers(verdict: dict[str, Any]) -> Iterator[str]:
         f"visible     signal-to-noise {seen['snr']:.1f} ({seen['snr_low']:.1f} to {seen['snr_high']:.1f}), "
         f"detection probability {seen['detection_probability']:.2f} at false alarms {seen['false_alarm_probability']:g}"
     )
+    level = seen["vanishing_erosion_km"]
+    yield f"vanishes    at {level['median']:.1f} km of erosion ({level['low']:.1f} to {level['high']:.1f} km)"
     if "fit" in verdict:
         fit = verdict["fit"]
         yield (

@@ -172,7 +172,7 @@ def test_a_case_agrees_with_a_single_run(erosion):
     assert np.abs(difference).max() < 0.015 * abs(modelled.peak)
     assert found["excess_mass_kg"] == pytest.approx(modelled.mass_deficit(), rel=0.01)
     assert found["half_width_km"] == pytest.approx(modelled.half_width / 1e3, rel=0.02)
-    seen = detect_without_map(single, modelled, noise_of(single, None))
+    seen, _ = detect_without_map(single, modelled, noise_of(single, None))
     assert found["signal_to_noise"] == pytest.approx(seen.snr, rel=0.02)
     assert found["detection_probability"] == pytest.approx(seen.detection_probability, abs=0.02)
 

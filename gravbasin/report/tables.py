@@ -97,7 +97,15 @@ def _detectability(verdict: Verdict) -> list[Row]:
             f"{number(short, 2)} to {number(long, 2)} km",
             "if shorter than the map resolves, the noise model makes the detection, not the map",
         ),
+        _vanishing(d["vanishing_erosion_km"]),
     ]
+
+
+def _vanishing(level: Mapping[str, Any]) -> Row:
+    beyond = " or more" if level["open_ended_share"] > 0.05 else ""
+    value = f"{number(level['median'], 2)} km ({number(level['low'], 2)} to {number(level['high'], 2)}{beyond})"
+    meaning = "deepest erosion at which it would still be seen here; in brackets 5–95 %, 0 where it never is"
+    return Row("erosion level at which it vanishes", value, meaning)
 
 
 def _fit(verdict: Verdict) -> list[Row]:

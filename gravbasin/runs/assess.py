@@ -120,16 +120,16 @@ def assess(
     noise = noise_of(scenario, observed)
     comparison = None
     if observed is None:
-        seen = detect_without_map(scenario, modelled, noise)
+        seen, vanishing = detect_without_map(scenario, modelled, noise)
     else:
         comparison = compare_with_map(scenario, modelled, observed, noise, progress=stage)
-        seen = comparison.detectability
+        seen, vanishing = comparison.detectability, comparison.vanishing
     candidates: list[Candidate] = []
     if search and observed is not None and comparison is not None:
         stage("charging for the search")
         diameter = 1e3 * scenario.crater.rim_diameter_km
         candidates = search_map(observed, comparison.places, noise, diameter=diameter, seed=scenario.seed)
-    verdict = verdict_of(scenario, modelled, noise.as_dict(), seen, comparison, observed)
+    verdict = verdict_of(scenario, modelled, noise.as_dict(), seen, vanishing, comparison, observed)
     if search:
         verdict["search"] = candidate_table(candidates).to_dict("records")
     result = Assessment(

@@ -31,6 +31,8 @@ from gravbasin.runs.families import compare_families, impact_bank
 from gravbasin.runs.forward_run import Modelled
 from gravbasin.runs.places import Places, places_of
 from gravbasin.scenario import Scenario
+from gravbasin.survey.sight import ring_sight
+from gravbasin.survey.vanish import Vanishing, vanishing_erosion
 
 __all__ = ["Comparison", "compare_with_map", "detect_without_map", "noise_of"]
 
@@ -75,6 +77,8 @@ class Comparison:
         Wall dip, central high and the like, for the reader: the evidence holds the profile already.
     places : Places
         What other places of the map say.
+    vanishing : Vanishing
+        At which erosion level the scenario's structure falls below detection on this map.
     maps : Dataset (northing, easting)
         observed, regional, residual, modelled, mGal; for pictures.
     """
@@ -94,6 +98,7 @@ class Comparison:
     fit: Fit
     marks: tuple[Mark, ...]
     places: Places
+    vanishing: Vanishing
     maps: xr.Dataset
 
     @property
@@ -214,12 +219,13 @@ def compare_with_map(
         fit=predictive_fit(likelihoods[0], impact_rings, rings.mean, impact.weights, places.level),
         marks=marks,
         places=places,
+        vanishing=vanishing_erosion(scenario, ring_sight(response, covariances, regional), modelled.radius),
         maps=_maps(observed, noise, modelled, np.hypot(easting, northing[:, None]), exclude),
     )
 
 
-def detect_without_map(scenario: Scenario, modelled: Modelled, noise: NoiseModel) -> Detectability:
-    """Detectability on an even survey with a stated noise, where there is no map."""
+def detect_without_map(scenario: Scenario, modelled: Modelled, noise: NoiseModel) -> tuple[Detectability, Vanishing]:
+    """Detectability, and the erosion at which it ends, on an even survey with a stated noise where there is no map."""
     spacing = KM * scenario.inference.station_spacing_km
     reach = max(scenario.inference.outer_radius_in_diameters * _diameter(scenario), LEAST_RINGS * spacing)
     edges = spacing * np.arange(int(np.ceil(reach / spacing)) + 1.0)
@@ -229,7 +235,10 @@ def detect_without_map(scenario: Scenario, modelled: Modelled, noise: NoiseModel
     best = stencils[0]
     templates = best.response @ modelled.profiles
     robust = ring_likelihood(best.covariance + shape_scatter(templates, best.area), best.likelihood.regional)
-    return _seen(scenario, modelled, robust, [s.covariance for s in stencils], templates, best.response, 2 * spacing)
+    covariances = [s.covariance for s in stencils]
+    seen = _seen(scenario, modelled, robust, covariances, templates, best.response, 2 * spacing)
+    sight = ring_sight(best.response, covariances, best.likelihood.regional)
+    return seen, vanishing_erosion(scenario, sight, modelled.radius)
 
 
 def _plausible(scenario: Scenario, noise: NoiseModel) -> list[NoiseModel]:

@@ -16,6 +16,7 @@ from gravbasin.runs.families import NOISE_ALONE, probabilities
 from gravbasin.runs.forward_run import Modelled
 from gravbasin.scenario import Scenario
 from gravbasin.scenario_file import scenario_hash
+from gravbasin.survey.vanish import Vanishing
 
 __all__ = ["CAUTIONS", "verdict_of"]
 
@@ -37,6 +38,7 @@ def verdict_of(
     modelled: Modelled,
     noise: dict[str, Any],
     seen: Detectability,
+    vanishing: Vanishing,
     comparison: Comparison | None,
     observed: xr.DataArray | None,
 ) -> dict[str, Any]:
@@ -67,6 +69,7 @@ def verdict_of(
             "detection_probability": seen.detection_probability,
             "false_alarm_probability": seen.false_alarm_probability,
             "wavelengths_km": list(seen.band_km),
+            "vanishing_erosion_km": vanishing.as_dict(),
         },
     }
     if comparison is not None:
