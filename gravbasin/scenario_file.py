@@ -6,7 +6,7 @@ import difflib
 import hashlib
 import json
 import tomllib
-from collections.abc import Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from pathlib import Path
 from typing import Any
 
@@ -17,8 +17,10 @@ from gravbasin.scenario import Scenario
 
 __all__ = ["ScenarioError", "load_scenario", "parse_override", "scenario_hash", "scenario_toml"]
 
-_FILES = ("observed", "samples")
-"""Tables whose `path` may be relative."""
+_FILES = (
+    "observed.path", "samples.path", "survey.area", "survey.no_go", "survey.roads", "survey.existing"
+)  # fmt: skip
+"""Fields that name files, one or a list, and may be relative."""
 
 
 class ScenarioError(InputError):
@@ -66,7 +68,7 @@ def load_scenario(path: str | Path, overrides: Mapping[str, Any] | None = None) 
     _check_overrides(changes, where)
     for dotted, value in changes.items():
         _set(tree, dotted, value)
-    if any(f"{name}.path" in changes for name in _FILES):
+    if any(name in changes for name in _FILES):
         _anchor(tree, Path.cwd())
     return _validated(tree, where)
 
@@ -90,11 +92,9 @@ def parse_override(text: str) -> tuple[str, Any]:
 
 
 def scenario_hash(scenario: Scenario) -> str:
-    """SHA-256 of the scenario without the map's folder, so that a moved project keeps its hash."""
+    """SHA-256 of the scenario without the folders of its files, so that a moved project keeps its hash."""
     tree = scenario.model_dump(mode="json")
-    for name in _FILES:
-        if tree[name] is not None:
-            tree[name]["path"] = Path(tree[name]["path"]).name
+    _rename(tree, lambda path: path.name)
     return hashlib.sha256(json.dumps(tree, sort_keys=True).encode()).hexdigest()
 
 
@@ -195,7 +195,16 @@ def _set(tree: dict[str, Any], dotted: str, value: Any) -> None:
 
 
 def _anchor(tree: dict[str, Any], folder: Path) -> None:
-    for name in _FILES:
+    _rename(tree, lambda path: str(folder / path.expanduser()))
+
+
+def _rename(tree: dict[str, Any], change: Callable[[Path], str]) -> None:
+    """Every file name in the tree replaced by what `change` makes of it."""
+    for dotted in _FILES:
+        name, _, key = dotted.partition(".")
         table = tree.get(name)
-        if isinstance(table, dict) and isinstance(table.get("path"), (str, Path)):
-            table["path"] = str(folder / Path(table["path"]).expanduser())
+        value = table.get(key) if isinstance(table, dict) else None
+        if isinstance(value, (str, Path)):
+            table[key] = change(Path(value))
+        elif isinstance(value, (list, tuple)):
+            table[key] = [change(Path(each)) if isinstance(each, (str, Path)) else each for each in value]
