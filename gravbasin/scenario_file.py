@@ -17,9 +17,7 @@ from gravbasin.scenario import Scenario
 
 __all__ = ["ScenarioError", "load_scenario", "parse_override", "scenario_hash", "scenario_toml"]
 
-_FILES = (
-    "observed.path", "samples.path", "survey.area", "survey.no_go", "survey.roads", "survey.existing"
-)  # fmt: skip
+_FILES = ("observed.path", "samples.path", "survey.area", "survey.no_go", "survey.roads", "survey.existing")
 """Fields that name files, one or a list, and may be relative."""
 
 
@@ -203,7 +201,9 @@ def _rename(tree: dict[str, Any], change: Callable[[Path], str]) -> None:
     for dotted in _FILES:
         name, _, key = dotted.partition(".")
         table = tree.get(name)
-        value = table.get(key) if isinstance(table, dict) else None
+        if not isinstance(table, dict):
+            continue
+        value = table.get(key)
         if isinstance(value, (str, Path)):
             table[key] = change(Path(value))
         elif isinstance(value, (list, tuple)):

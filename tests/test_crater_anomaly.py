@@ -53,14 +53,15 @@ def test_the_low_is_as_wide_as_the_crater(fresh: dict[float, np.ndarray]) -> Non
     """Half the peak is reached between 0.6 and 1.0 rim radii (low as wide as the rim, 0.9-1.2: French 1998)."""
     for values in fresh.values():
         total = values.sum(axis=0)
-        outside = SHARE[np.argmin(total):]
-        half = np.interp(0.5 * total.min(), total[np.argmin(total):], outside)
+        outside = SHARE[np.argmin(total) :]
+        half = np.interp(0.5 * total.min(), total[np.argmin(total) :], outside)
         assert 0.6 <= half <= 1.0
         assert abs(total[-1]) < 0.05 * abs(total.min())
 
 
 def test_a_central_high_within_the_low_needs_a_large_crater(fresh: dict[float, np.ndarray]) -> None:
     """Common above 30 km, a few to 15 mGal (Hawke 2004; from memory)."""
+
     def relative(rim: float) -> float:
         total = fresh[rim].sum(axis=0)
         return float(total[0] - total.min())

@@ -73,8 +73,12 @@ def test_draws_scatter_about_the_law_as_it_states() -> None:
     count, rng = 4000, np.random.default_rng(11)
     drawn = [crater_dimensions(30.0, rng=rng, given={"transient_diameter_km": 20.0}) for _ in range(count)]
     law = crater_dimensions(30.0, given={"transient_diameter_km": 20.0})
-    for name, choice in [("transient_depth_km", "paraboloid"), ("structural_uplift_km", "stratigraphic"),
-                         ("melt_volume_km3", "default"), ("fracture_base_km", "complex")]:
+    for name, choice in [
+        ("transient_depth_km", "paraboloid"),
+        ("structural_uplift_km", "stratigraphic"),
+        ("melt_volume_km3", "default"),
+        ("fracture_base_km", "complex"),
+    ]:
         log = np.log([getattr(d, name) / getattr(law, name) for d in drawn])
         scatter = LAWS[name][choice].scatter
         assert abs(log.mean()) < 4 * scatter / np.sqrt(count)

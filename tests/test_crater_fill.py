@@ -86,9 +86,12 @@ def test_sediment_density_by_age_given_or_marine() -> None:
     assert lithified_density(None) == 2300.0
     assert [lithified_density(a) for a in (0.1, 1.0, 1000.0, 3000.0)] == [2000.0, 2000.0, 2500.0, 2500.0]
     given = {"sediment_density_kg_m3": 2222.0}
-    assert crater_model(
-        Scenario(crater={"rim_diameter_km": 9.0}, fill=given), np.random.default_rng(1)
-    ).fill.sediment_density == 2222.0
+    assert (
+        crater_model(
+            Scenario(crater={"rim_diameter_km": 9.0}, fill=given), np.random.default_rng(1)
+        ).fill.sediment_density
+        == 2222.0
+    )
     assert model(9.0, crater={"setting": "marine"}).fill.sediment_density == 2530.0
     drawn = [crater_model(Scenario(crater={"rim_diameter_km": 9.0}), np.random.default_rng(i)) for i in range(200)]
     values = [m.fill.sediment_density for m in drawn]

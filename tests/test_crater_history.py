@@ -21,8 +21,12 @@ def scenario(**tables: dict) -> Scenario:
         ([], 0, 0, ()),
         ([Erosion(2000), Burial(500), Erosion(800)], 2300, 0, ((2000, 500),)),
         ([Burial(900), Erosion(300)], 0, 600, ((0, 900),)),
-        ([Erosion(100), Burial(50), Burial(70), Erosion(20), Burial(10)], 100, 110,
-         ((100, 50), (100, 120), (100, 110))),
+        (
+            [Erosion(100), Burial(50), Burial(70), Erosion(20), Burial(10)],
+            100,
+            110,
+            ((100, 50), (100, 120), (100, 110)),
+        ),
         ([Burial(0.0), Erosion(0.0)], 0, 0, ()),
     ],
 )

@@ -108,9 +108,7 @@ def test_an_eroded_section_is_the_fresh_one_with_its_top_removed(rim: float) -> 
 
 def test_burial_only_adds_distance_where_no_crack_closes() -> None:
     bare = crater_model(scenario(damage={"closure_pressure_mpa": 1e9}, history={"erosion_km": 1.0}))
-    buried = crater_model(
-        scenario(damage={"closure_pressure_mpa": 1e9}, history={"erosion_km": 1.0, "burial_km": 0.8})
-    )
+    buried = crater_model(scenario(damage={"closure_pressure_mpa": 1e9}, history={"erosion_km": 1.0, "burial_km": 0.8}))
     mesh = default_mesh(bare)
     deep = Mesh(np.concatenate([[0.0, 400.0], 800.0 + mesh.depth_edges]), mesh.radius_edges)
     below = contrast(buried, deep)

@@ -26,11 +26,14 @@ TRUTH = NoiseModel(sill_mgal=9.0, range_m=35e3, smoothness=0.8, nugget_mgal=0.8)
 # --- the model -------------------------------------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize(("smoothness", "closed"), [
-    (0.5, lambda x: np.exp(-x)),
-    (1.5, lambda x: (1 + x) * np.exp(-x)),
-    (2.5, lambda x: (1 + x + x**2 / 3) * np.exp(-x)),
-])
+@pytest.mark.parametrize(
+    ("smoothness", "closed"),
+    [
+        (0.5, lambda x: np.exp(-x)),
+        (1.5, lambda x: (1 + x) * np.exp(-x)),
+        (2.5, lambda x: (1 + x + x**2 / 3) * np.exp(-x)),
+    ],
+)
 def test_half_integer_smoothness_has_its_closed_form(smoothness: float, closed: object) -> None:
     distance = np.array([0.0, 1e-9, 10.0, 3e3, 4e4, 3e5, 1e9])
     x = math.sqrt(2 * smoothness) * distance / 30e3
@@ -52,8 +55,9 @@ def test_correlation_agrees_with_mpmath() -> None:
 def test_large_arrays_are_interpolated_to_1e_9(smoothness: float) -> None:
     distance = np.concatenate([[0.0], np.random.default_rng(1).uniform(0.0, 6e5, 20_000), np.geomspace(50.0, 1e6, 500)])
     table = matern_correlation(distance, range_m=30e3, smoothness=smoothness)
-    exact = np.concatenate([matern_correlation(part, range_m=30e3, smoothness=smoothness)
-                            for part in np.array_split(distance, 20)])
+    exact = np.concatenate(
+        [matern_correlation(part, range_m=30e3, smoothness=smoothness) for part in np.array_split(distance, 20)]
+    )
     assert np.abs(table - exact).max() < 2e-9
 
 
@@ -72,15 +76,23 @@ def test_spectrum_transforms_to_the_covariance(smoothness: float) -> None:
     assert variance == pytest.approx(49.0, rel=1e-6)
     # Hankel transform at one distance, lobe by lobe; averaging the last two sums takes the alternating tail off
     edges = np.concatenate([[0.0], special.jn_zeros(0, 400) / 25e3])
-    pieces = [integrate.fixed_quad(lambda k: noise.spectrum(k) * special.j0(25e3 * k) * k / (2 * np.pi), a, b, n=20)[0]
-              for a, b in itertools.pairwise(edges)]
+    pieces = [
+        integrate.fixed_quad(lambda k: noise.spectrum(k) * special.j0(25e3 * k) * k / (2 * np.pi), a, b, n=20)[0]
+        for a, b in itertools.pairwise(edges)
+    ]
     sums = np.cumsum(pieces)
     assert 0.5 * (sums[-1] + sums[-2]) == pytest.approx(float(noise.covariance(25e3)), rel=2e-5)
 
 
 def test_verdict_keys_and_draws_of_a_given_model() -> None:
-    assert TRUTH.as_dict() == {"model": "matern", "sill_mgal": 9.0, "range_km": 35.0, "smoothness": 0.8,
-                               "nugget_mgal": 0.8, "regional_order": 1}
+    assert TRUTH.as_dict() == {
+        "model": "matern",
+        "sill_mgal": 9.0,
+        "range_km": 35.0,
+        "smoothness": 0.8,
+        "nugget_mgal": 0.8,
+        "regional_order": 1,
+    }
     draws = TRUTH.draws(np.random.default_rng(3), 4000)
     logs = np.log([draw.sill_mgal / 9.0 for draw in draws])
     assert abs(logs.std() - 0.15) < 4 * 0.15 / math.sqrt(8000)  # four standard errors: fails once in 16,000 seeds
@@ -88,10 +100,19 @@ def test_verdict_keys_and_draws_of_a_given_model() -> None:
     np.testing.assert_allclose([draw.nugget_mgal / draw.sill_mgal for draw in draws], 0.8 / 9.0)
 
 
-@pytest.mark.parametrize(("field", "value"), [
-    ("sill_mgal", 0.0), ("sill_mgal", math.nan), ("range_m", -1.0), ("smoothness", 0.0), ("smoothness", 21.0),
-    ("nugget_mgal", -0.1), ("regional_order", 3), ("model", "spherical"),
-])
+@pytest.mark.parametrize(
+    ("field", "value"),
+    [
+        ("sill_mgal", 0.0),
+        ("sill_mgal", math.nan),
+        ("range_m", -1.0),
+        ("smoothness", 0.0),
+        ("smoothness", 21.0),
+        ("nugget_mgal", -0.1),
+        ("regional_order", 3),
+        ("model", "spherical"),
+    ],
+)
 def test_faulty_models_are_refused(field: str, value: object) -> None:
     good = {"sill_mgal": 9.0, "range_m": 35e3, "smoothness": 0.8, field: value}
     with pytest.raises(InputError, match=rf"noise\.{field} = "):
@@ -101,11 +122,14 @@ def test_faulty_models_are_refused(field: str, value: object) -> None:
 # --- random fields ---------------------------------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize("noise", [
-    TRUTH,
-    NoiseModel(sill_mgal=5.0, range_m=20e3, smoothness=1.8),
-    NoiseModel(sill_mgal=5.0, range_m=90e3, smoothness=0.4, nugget_mgal=3.0),
-])
+@pytest.mark.parametrize(
+    "noise",
+    [
+        TRUTH,
+        NoiseModel(sill_mgal=5.0, range_m=20e3, smoothness=1.8),
+        NoiseModel(sill_mgal=5.0, range_m=90e3, smoothness=0.4, nugget_mgal=3.0),
+    ],
+)
 def test_fields_have_the_covariance_of_the_model(noise: NoiseModel) -> None:
     """Products at fixed pairs over independent fields; 15 pairs, each within 4 standard errors: fails 1 in 1,000."""
     n = 3000
@@ -139,9 +163,14 @@ def test_an_embedding_that_cannot_be_positive_is_refused() -> None:
         simulate_noise(endless, 5_000.0 * np.arange(300), 5_000.0 * np.arange(300))
 
 
-@pytest.mark.parametrize(("easting", "message"), [
-    (EASTING[::-1], "must ascend"), (np.array([0.0, 1.0, 3.0]), "evenly spaced"), (np.array([1.0]), "at least 2"),
-])
+@pytest.mark.parametrize(
+    ("easting", "message"),
+    [
+        (EASTING[::-1], "must ascend"),
+        (np.array([0.0, 1.0, 3.0]), "evenly spaced"),
+        (np.array([1.0]), "at least 2"),
+    ],
+)
 def test_faulty_axes_are_refused(easting: np.ndarray, message: str) -> None:
     with pytest.raises(InputError, match=message):
         simulate_noise(TRUTH, easting, NORTHING)
@@ -227,27 +256,33 @@ def test_thinned_nodes_keep_their_distance_and_include_close_pairs(field: xr.Dat
     np.testing.assert_array_equal(place, nodes.values)
 
 
-@pytest.mark.parametrize(("kwargs", "message"), [
-    ({"exclude": (150e3, 1.1e6, 0.0)}, "radius > 0"),
-    ({"exclude": (150e3, 1.12e6, 170e3)}, "of which an estimate needs 80"),
-    ({"resolution_m": -1.0}, "resolution_m"),
-    ({"max_points": 20}, "must be 80 or more"),
-    ({"regional_order": 3}, "must be 0, 1 or 2"),
-])
+@pytest.mark.parametrize(
+    ("kwargs", "message"),
+    [
+        ({"exclude": (150e3, 1.1e6, 0.0)}, "radius > 0"),
+        ({"exclude": (150e3, 1.12e6, 170e3)}, "of which an estimate needs 80"),
+        ({"resolution_m": -1.0}, "resolution_m"),
+        ({"max_points": 20}, "must be 80 or more"),
+        ({"regional_order": 3}, "must be 0, 1 or 2"),
+    ],
+)
 def test_faulty_requests_are_refused(field: xr.DataArray, kwargs: dict, message: str) -> None:
     with pytest.raises(InputError, match=message):
         estimate_noise(field, **kwargs)
 
 
-@pytest.mark.parametrize(("change", "message"), [
-    (lambda f: f.values, "must be an xarray DataArray"),
-    (lambda f: f.transpose(), "observed.dims"),
-    (lambda f: f.sortby("northing", ascending=False), "must ascend"),
-    (lambda f: f.assign_attrs(units="m s-2"), "must be mGal"),
-    (lambda f: f.isel(easting=[0, 1, 3, 4]), "evenly spaced"),
-    (lambda f: f * 0.0, "must vary"),
-    (lambda f: f / 0.0, "must be finite or NaN"),
-])
+@pytest.mark.parametrize(
+    ("change", "message"),
+    [
+        (lambda f: f.values, "must be an xarray DataArray"),
+        (lambda f: f.transpose(), "observed.dims"),
+        (lambda f: f.sortby("northing", ascending=False), "must ascend"),
+        (lambda f: f.assign_attrs(units="m s-2"), "must be mGal"),
+        (lambda f: f.isel(easting=[0, 1, 3, 4]), "evenly spaced"),
+        (lambda f: f * 0.0, "must vary"),
+        (lambda f: f / 0.0, "must be finite or NaN"),
+    ],
+)
 def test_faulty_maps_are_refused(field: xr.DataArray, change: object, message: str) -> None:
     with np.errstate(divide="ignore"), pytest.raises(GravbasinError, match=message):
         estimate_noise(change(field))
@@ -294,11 +329,16 @@ def test_block_errors_are_those_of_leaving_the_block_out_and_refitting(field: xr
     assert check.ratio == pytest.approx(total / len(position), rel=1e-8)
 
 
-@pytest.mark.parametrize("wrong", [
-    NoiseModel(sill_mgal=9.0, range_m=35e3, smoothness=2.5, nugget_mgal=0.1),  # too smooth: the fault that fakes signal
-    NoiseModel(sill_mgal=5.0, range_m=35e3, smoothness=0.8, nugget_mgal=0.4),
-    NoiseModel(sill_mgal=20.0, range_m=35e3, smoothness=0.8, nugget_mgal=0.8),
-])
+@pytest.mark.parametrize(
+    "wrong",
+    [
+        NoiseModel(
+            sill_mgal=9.0, range_m=35e3, smoothness=2.5, nugget_mgal=0.1
+        ),  # too smooth: the fault that fakes signal
+        NoiseModel(sill_mgal=5.0, range_m=35e3, smoothness=0.8, nugget_mgal=0.4),
+        NoiseModel(sill_mgal=20.0, range_m=35e3, smoothness=0.8, nugget_mgal=0.8),
+    ],
+)
 def test_the_check_finds_a_wrong_model(field: xr.DataArray, estimate: NoiseModel, wrong: NoiseModel) -> None:
     assert check_noise(field, wrong).p_value < 1e-4
     assert check_noise(field, estimate).p_value > 1e-3

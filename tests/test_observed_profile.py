@@ -34,8 +34,14 @@ EDGES = np.array([0.0, 6e3, 13e3, 21e3, 30e3, 45e3, 62e3])
 
 
 def _map(values: np.ndarray) -> xr.DataArray:
-    return data_array(values, ("northing", "easting"), {"northing": NORTHING, "easting": EASTING}, name="anomaly",
-                      units="mGal", long_name="test map")
+    return data_array(
+        values,
+        ("northing", "easting"),
+        {"northing": NORTHING, "easting": EASTING},
+        name="anomaly",
+        units="mGal",
+        long_name="test map",
+    )
 
 
 def _distance(centre: tuple[float, float] = CENTRE) -> np.ndarray:
@@ -60,8 +66,14 @@ def test_a_cone_is_met_at_the_ring_radius_and_better_on_finer_grids() -> None:
     errors = []
     for step in (4_000.0, 2_000.0, 1_000.0):
         axis = step * np.arange(-round(64e3 / step), round(64e3 / step) + 1)
-        cone = data_array(np.hypot(axis, axis[:, None]) / 1e3, ("northing", "easting"),
-                          {"northing": axis, "easting": axis}, name="cone", units="mGal", long_name="cone")
+        cone = data_array(
+            np.hypot(axis, axis[:, None]) / 1e3,
+            ("northing", "easting"),
+            {"northing": axis, "easting": axis},
+            name="cone",
+            units="mGal",
+            long_name="cone",
+        )
         errors.append(np.abs(ring_means(cone, (0.0, 0.0), EDGES).mean - ring_radii(EDGES) / 1e3).max())
     assert errors[0] < 0.35  # km of 3 and more: the innermost ring is three cells wide
     assert errors[2] < errors[1] < errors[0]
@@ -93,17 +105,21 @@ def test_edges_reach_the_largest_circle_inside_the_map() -> None:
     assert edges[1] == 5e3
     room = min(CENTRE[0] + 2e3, EASTING[-1] + 2e3 - CENTRE[0], NORTHING[-1] + 2.5e3 - CENTRE[1])
     assert room - 5e3 < edges[-1] <= room
-    np.testing.assert_allclose(ring_edges(_map(np.zeros((31, 46))), CENTRE, width_m=2e3, radius_m=20e3),
-                               np.arange(0, 20.1e3, 2e3))
+    np.testing.assert_allclose(
+        ring_edges(_map(np.zeros((31, 46))), CENTRE, width_m=2e3, radius_m=20e3), np.arange(0, 20.1e3, 2e3)
+    )
 
 
-@pytest.mark.parametrize(("centre", "edges", "message"), [
-    ((-1e6, 0.0), None, "must lie inside the map, easting 0 to 180000"),
-    ((EASTING[1], NORTHING[1]), None, "three needed|of three"),
-    ((-1e6, 0.0), EDGES, "has no data within 62000 m"),
-    (CENTRE, EDGES[::-1], "must ascend from 0 or more"),
-    (CENTRE, [-1.0, 2.0], "must ascend from 0 or more"),
-])
+@pytest.mark.parametrize(
+    ("centre", "edges", "message"),
+    [
+        ((-1e6, 0.0), None, "must lie inside the map, easting 0 to 180000"),
+        ((EASTING[1], NORTHING[1]), None, "three needed|of three"),
+        ((-1e6, 0.0), EDGES, "has no data within 62000 m"),
+        (CENTRE, EDGES[::-1], "must ascend from 0 or more"),
+        (CENTRE, [-1.0, 2.0], "must ascend from 0 or more"),
+    ],
+)
 def test_faulty_requests_are_refused(centre: tuple[float, float], edges: object, message: str) -> None:
     with pytest.raises(InputError, match=message):
         radial_profile(_map(_distance()), centre=centre, edges_m=edges, noise=NOISE)
@@ -156,7 +172,9 @@ def test_thin_rings_have_the_azimuthal_mean_of_the_covariance() -> None:
         for j, b in ((0, 30e3), (2, 50e3)):
             expected = integrate.quad(
                 lambda t, a=a, b=b: float(noise.covariance(abs(a - b * np.exp(1j * t)))) / math.pi,
-                0.0, math.pi, limit=200,
+                0.0,
+                math.pi,
+                limit=200,
             )[0]
             assert found[i, j] == pytest.approx(expected, rel=2e-3)
 

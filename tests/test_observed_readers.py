@@ -61,13 +61,15 @@ def test_netcdf_with_labels_and_provenance(tmp_path: Path, values: np.ndarray) -
 
 
 def test_netcdf_descending_transposed_kilometres_and_si_units_give_the_same_map(
-    tmp_path: Path, values: np.ndarray,
+    tmp_path: Path,
+    values: np.ndarray,
 ) -> None:
     dataset = _dataset(values)
     dataset = dataset.isel(y=slice(None, None, -1), x=slice(None, None, -1)).transpose("x", "y")
     dataset["bouguer"] = (dataset.bouguer * 1e-5).assign_attrs(units="m s-2")
-    dataset = dataset.assign_coords(x=("x", dataset.x.values / 1e3, {"units": "km"}),
-                                    y=("y", dataset.y.values / 1e3, {"units": "kilometers"}))
+    dataset = dataset.assign_coords(
+        x=("x", dataset.x.values / 1e3, {"units": "km"}), y=("y", dataset.y.values / 1e3, {"units": "kilometers"})
+    )
     grid = read_grid(_write(tmp_path / "map.nc", dataset))
     _check(grid, values)
     assert read_provenance(grid)["flips"] == ["easting", "northing"]
@@ -132,19 +134,22 @@ def test_csv_coordinates_rounded_to_the_metre(tmp_path: Path, values: np.ndarray
 
 def _line(path: Path, position: int, new: str | None) -> Path:
     lines = path.read_text().splitlines()
-    lines[position:position + 1] = [] if new is None else [new]
+    lines[position : position + 1] = [] if new is None else [new]
     path.write_text("\n".join(lines))
     return path
 
 
-@pytest.mark.parametrize(("position", "new", "message"), [
-    (7, None, r"is missing from the lattice \(1 such"),
-    (7, "400000,5100000,3.5", r"node = \(400000, 5100000\): is given more than once"),
-    (7, "410000,north,3.5", r"northing = north: is not a number, in data row 6"),
-    (1, "lon,lat,value", r"columns = lon: must be a length, not degrees"),
-    (1, "a,b,value", r"must have one easting column, found none"),
-    (1, "x,easting,value", r"must have one easting column, found several"),
-])
+@pytest.mark.parametrize(
+    ("position", "new", "message"),
+    [
+        (7, None, r"is missing from the lattice \(1 such"),
+        (7, "400000,5100000,3.5", r"node = \(400000, 5100000\): is given more than once"),
+        (7, "410000,north,3.5", r"northing = north: is not a number, in data row 6"),
+        (1, "lon,lat,value", r"columns = lon: must be a length, not degrees"),
+        (1, "a,b,value", r"must have one easting column, found none"),
+        (1, "x,easting,value", r"must have one easting column, found several"),
+    ],
+)
 def test_csv_faults(tmp_path: Path, values: np.ndarray, position: int, new: str | None, message: str) -> None:
     with pytest.raises(InputError, match=message) as caught:
         read_grid(_line(_csv(tmp_path / "bad.csv", values), position, new))
@@ -164,8 +169,18 @@ def _geotiff(path: Path, values: np.ndarray, *, area: bool, crs: str = "EPSG:326
     rasterio = pytest.importorskip("rasterio")
     step_x, step_y = EASTING[1] - EASTING[0], NORTHING[1] - NORTHING[0]
     corner = rasterio.Affine(step_x, 0.0, EASTING[0] - step_x / 2, 0.0, -step_y, NORTHING[-1] + step_y / 2)
-    with rasterio.open(path, "w", driver="GTiff", height=NORTHING.size, width=EASTING.size, count=1, crs=crs,
-                       dtype="float64", transform=corner, nodata=-9999.0) as target:
+    with rasterio.open(
+        path,
+        "w",
+        driver="GTiff",
+        height=NORTHING.size,
+        width=EASTING.size,
+        count=1,
+        crs=crs,
+        dtype="float64",
+        transform=corner,
+        nodata=-9999.0,
+    ) as target:
         target.write(values[::-1], 1)
         target.units = (units,)
         target.update_tags(AREA_OR_POINT="Area" if area else "Point")
@@ -247,29 +262,39 @@ def _faulty(values: np.ndarray, fault: str) -> xr.Dataset:
     elif fault == "no grid":
         dataset = dataset.isel(x=0)
     elif fault == "geographic":
-        dataset["crs"] = ((), 0, {"grid_mapping_name": "latitude_longitude", "semi_major_axis": 6378137.0,
-                                  "inverse_flattening": 298.257223563})
+        dataset["crs"] = (
+            (),
+            0,
+            {
+                "grid_mapping_name": "latitude_longitude",
+                "semi_major_axis": 6378137.0,
+                "inverse_flattening": 298.257223563,
+            },
+        )
         dataset.bouguer.attrs["grid_mapping"] = "crs"
     return dataset
 
 
-@pytest.mark.parametrize(("fault", "message"), [
-    ("degrees", "x = degrees_east: must be a length, not degrees"),
-    ("longitude", "must be a length, not degrees"),
-    ("swapped", "x = projection_y_coordinate: is called both easting and northing"),
-    ("nameless", "column = column: is neither easting nor northing"),
-    ("uneven", r"easting = 416000 to 418500: must be evenly spaced: a step of 2500 meets steps of 2000"),
-    ("no lengths", "northing.units = missing"),
-    ("no units", r'bouguer.units = missing.*units="mGal"'),
-    ("wrong units", "bouguer.units = K: must be a unit of gravity"),
-    ("constant", "values = 7 everywhere: must vary"),
-    ("infinite", "must be finite"),
-    ("fill", r"values = 99999 mGal: must be within ±2000 mGal"),
-    ("nan", r"values = 1 of 374 are NaN.*\(406000, 5106000\)"),
-    ("narrow", "easting = 15 nodes: must have 16 or more"),
-    ("no grid", "holds no two-dimensional variable"),
-    ("geographic", "must be projected, not degrees"),
-])
+@pytest.mark.parametrize(
+    ("fault", "message"),
+    [
+        ("degrees", "x = degrees_east: must be a length, not degrees"),
+        ("longitude", "must be a length, not degrees"),
+        ("swapped", "x = projection_y_coordinate: is called both easting and northing"),
+        ("nameless", "column = column: is neither easting nor northing"),
+        ("uneven", r"easting = 416000 to 418500: must be evenly spaced: a step of 2500 meets steps of 2000"),
+        ("no lengths", "northing.units = missing"),
+        ("no units", r'bouguer.units = missing.*units="mGal"'),
+        ("wrong units", "bouguer.units = K: must be a unit of gravity"),
+        ("constant", "values = 7 everywhere: must vary"),
+        ("infinite", "must be finite"),
+        ("fill", r"values = 99999 mGal: must be within ±2000 mGal"),
+        ("nan", r"values = 1 of 374 are NaN.*\(406000, 5106000\)"),
+        ("narrow", "easting = 15 nodes: must have 16 or more"),
+        ("no grid", "holds no two-dimensional variable"),
+        ("geographic", "must be projected, not degrees"),
+    ],
+)
 def test_netcdf_faults(tmp_path: Path, values: np.ndarray, fault: str, message: str) -> None:
     path = _write(tmp_path / "bad.nc", _faulty(values, fault))
     with pytest.raises(InputError, match=message) as caught:

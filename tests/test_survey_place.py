@@ -36,8 +36,9 @@ def write(path, kind, coordinates, **extra):
 
 
 def test_even_odd_rule_respects_holes_and_counts_area():
-    square, hole = (np.array(s, dtype=float) for s in (
-        [[0, 0], [4, 0], [4, 3], [0, 3]], [[1, 1], [2, 1], [2, 2], [1, 2]]))
+    square, hole = (
+        np.array(s, dtype=float) for s in ([[0, 0], [4, 0], [4, 3], [0, 3]], [[1, 1], [2, 1], [2, 2], [1, 2]])
+    )
     polygon = (square, hole)
     assert polygon_area(polygon) == 11.0
     rng = np.random.default_rng(1)
@@ -154,8 +155,11 @@ def test_stations_from_a_table_and_its_faults(tmp_path):
 
 
 def test_systems_that_are_no_map_in_metres_are_refused():
-    for name, hint in (("EPSG:4326", "projection in metres"), ("EPSG:2263", "projection in metres"),
-                       ("moon", "not a known")):
+    for name, hint in (
+        ("EPSG:4326", "projection in metres"),
+        ("EPSG:2263", "projection in metres"),
+        ("moon", "not a known"),
+    ):
         with pytest.raises(InputError, match=hint):
             projected_crs(name, where="survey.crs")
 
@@ -209,14 +213,28 @@ def test_polygons_and_lines_survive_a_geopackage(tmp_path):
 
     blob = struct.pack("<BII", 1, 3, 2) + ring(closed(OUTLINE)) + ring(closed(LAKE))
     crs = projected_crs(UTM, where="")
-    raw.write(tmp_path / "a.gpkg", np.array([blob], dtype=object), [], [], driver="GPKG", geometry_type="Polygon",
-              crs=crs.to_wkt())
+    raw.write(
+        tmp_path / "a.gpkg",
+        np.array([blob], dtype=object),
+        [],
+        [],
+        driver="GPKG",
+        geometry_type="Polygon",
+        crs=crs.to_wkt(),
+    )
     outer, hole = read_shapes(tmp_path / "a.gpkg", "polygon", crs=crs, what="survey.area").polygons[0]
     np.testing.assert_array_equal(outer[:-1], OUTLINE)
     np.testing.assert_array_equal(hole[:-1], LAKE)
     line = struct.pack("<BI", 1, 2) + ring(ROADS[0])
-    raw.write(tmp_path / "l.gpkg", np.array([line], dtype=object), [], [], driver="GPKG", geometry_type="LineString",
-              crs=crs.to_wkt())
+    raw.write(
+        tmp_path / "l.gpkg",
+        np.array([line], dtype=object),
+        [],
+        [],
+        driver="GPKG",
+        geometry_type="LineString",
+        crs=crs.to_wkt(),
+    )
     np.testing.assert_array_equal(read_shapes(tmp_path / "l.gpkg", "line", crs=crs, what="x").lines[0], ROADS[0])
 
 
@@ -237,8 +255,10 @@ def test_degrees_are_those_of_the_projection():
 
 def test_station_errors_add_in_squares_and_follow_their_formulas():
     """0.3086 − 0.0419 ρ per metre, 0.812 sin 2φ per kilometre (common practice)."""
-    terms = {t.name: t.error_mgal for t in error_terms(StationErrors(height_m=0.5, position_m=100.0, relief_m=50.0,
-                                                                      latitude_degrees=45.0))}
+    terms = {
+        t.name: t.error_mgal
+        for t in error_terms(StationErrors(height_m=0.5, position_m=100.0, relief_m=50.0, latitude_degrees=45.0))
+    }
     assert terms["height"] == pytest.approx((0.3086 - 0.0419 * 2.67) * 0.5)
     assert terms["northing"] == pytest.approx(0.0812)
     assert terms["slab density"] == pytest.approx(0.0419 * 50 * 0.1)
@@ -254,8 +274,14 @@ def test_costs_come_from_the_rates_alone():
     assert bare.stations == 40
     assert travelled(line) == pytest.approx(39.0)
     assert np.isnan([bare.days, bare.cost]).all()
-    rates = Costs(stations_per_day=10, travel_km_per_day=5.0, repeat_share=0.05, day_rate=100.0, station_cost=3.0,
-                  mobilisation=50.0)
+    rates = Costs(
+        stations_per_day=10,
+        travel_km_per_day=5.0,
+        repeat_share=0.05,
+        day_rate=100.0,
+        station_cost=3.0,
+        mobilisation=50.0,
+    )
     assert effort(line, rates).days == 8  # 39 km at 5 km a day outlasts 42 readings at 10 a day
     assert effort(line, rates).cost == 50 + 800 + 120
     assert effort(line[:0], rates).cost == 0

@@ -171,8 +171,18 @@ def test_position_scale_of_the_charge_against_shifted_templates():
     """1/√λ from the spectrum against correlations of whitened templates of neighbouring centres on a dense grid."""
     noise = NoiseModel(sill_mgal=3.0, range_m=15e3, smoothness=1.0, regional_order=0)
     plane, spacing, error = Plane.of(RADIUS).through(CURVES), 3e3, 0.5
-    found = search_charge(plane, CURVES, noise, MODEL, np.zeros((3, 0)), spacing=spacing, error=error, area=1e9,
-                          diameter_range=0.0, false_alarm_probability=1e-3)
+    found = search_charge(
+        plane,
+        CURVES,
+        noise,
+        MODEL,
+        np.zeros((3, 0)),
+        spacing=spacing,
+        error=error,
+        area=1e9,
+        diameter_range=0.0,
+        false_alarm_probability=1e-3,
+    )
     axis = np.arange(-42e3, 43e3, spacing)
     place = np.stack([a.ravel() for a in np.meshgrid(axis, axis)], axis=1)
     away = np.hypot(*(place[:, None] - place[None]).transpose(2, 0, 1))

@@ -49,8 +49,9 @@ def _choose(candidates: dict[str, str | None], wanted: str | None, where: str) -
             raise InputError("variable", wanted, f"must be a grid in the file; it has: {names}", "choose one", where)
         return wanted
     if not candidates:
-        raise InputError("variable", "none", "the file holds no two-dimensional variable",
-                         "give a map on two axes", where)
+        raise InputError(
+            "variable", "none", "the file holds no two-dimensional variable", "give a map on two axes", where
+        )
     gravity = [name for name, units in candidates.items() if is_gravity(units)]
     for group in (list(candidates), gravity):
         if len(group) == 1:
@@ -71,17 +72,25 @@ def _load_netcdf(path: Path, variable: str | None) -> RawGrid:
     except (OSError, ValueError, KeyError, EOFError) as fault:
         raise InputError("format", fault, "cannot be read as netCDF", "check that the file is whole", where) from fault
     dataset = dataset.squeeze(drop=True)
-    grids = {str(name): array.attrs.get("units") for name, array in dataset.data_vars.items()
-             if array.ndim == 2 and np.issubdtype(array.dtype, np.number)}
+    grids = {
+        str(name): array.attrs.get("units")
+        for name, array in dataset.data_vars.items()
+        if array.ndim == 2 and np.issubdtype(array.dtype, np.number)
+    }
     name = _choose(grids, variable, where)
     array = dataset[name]
     x_dim, y_dim = _axes(array, where)
     return RawGrid(
-        x=np.asarray(array[x_dim].values, dtype=float), y=np.asarray(array[y_dim].values, dtype=float),
-        values=np.asarray(array.transpose(y_dim, x_dim).values, dtype=float), variable=name,
-        units=array.attrs.get("units"), x_units=array[x_dim].attrs.get("units"),
-        y_units=array[y_dim].attrs.get("units"), long_name=str(array.attrs.get("long_name", "")),
-        crs_wkt=_crs_wkt(dataset, array, where), notes={"transposed": array.dims == (x_dim, y_dim)},
+        x=np.asarray(array[x_dim].values, dtype=float),
+        y=np.asarray(array[y_dim].values, dtype=float),
+        values=np.asarray(array.transpose(y_dim, x_dim).values, dtype=float),
+        variable=name,
+        units=array.attrs.get("units"),
+        x_units=array[x_dim].attrs.get("units"),
+        y_units=array[y_dim].attrs.get("units"),
+        long_name=str(array.attrs.get("long_name", "")),
+        crs_wkt=_crs_wkt(dataset, array, where),
+        notes={"transposed": array.dims == (x_dim, y_dim)},
     )
 
 
@@ -90,8 +99,13 @@ def _axes(array: xr.DataArray, where: str) -> tuple[str, str]:
     roles = {}
     for dim in map(str, array.dims):
         if dim not in array.coords:
-            raise InputError(dim, "no values", "a dimension of the map must have a coordinate variable",
-                             f"write the cell centres as variable {dim}(d{dim}) with units", where)
+            raise InputError(
+                dim,
+                "no values",
+                "a dimension of the map must have a coordinate variable",
+                f"write the cell centres as variable {dim}(d{dim}) with units",
+                where,
+            )
         attrs = array[dim].attrs
         clues = [dim.lower(), str(attrs.get("standard_name", "")).lower()]
         if is_degrees(attrs.get("units")) or _DEGREES & set(clues):
@@ -101,8 +115,13 @@ def _axes(array: xr.DataArray, where: str) -> tuple[str, str]:
         votes.discard(None)
         if len(votes) != 1:
             rule = "is called both easting and northing" if votes else "is neither easting nor northing"
-            raise InputError(dim, attrs.get("standard_name", dim), rule,
-                             "name it easting or northing, or give its standard_name or axis attribute", where)
+            raise InputError(
+                dim,
+                attrs.get("standard_name", dim),
+                rule,
+                "name it easting or northing, or give its standard_name or axis attribute",
+                where,
+            )
         roles[votes.pop()] = dim
     if len(roles) != 2:
         raise InputError("dimensions", array.dims, "are both easting or both northing", "name one of each", where)
@@ -139,18 +158,31 @@ def _load_csv(path: Path, variable: str | None) -> RawGrid:
     try:
         frame = pd.read_csv(path, comment="#", skipinitialspace=True, encoding="utf-8-sig")
     except (ValueError, UnicodeDecodeError, pd.errors.ParserError) as fault:
-        raise InputError("format", str(fault).strip(), "cannot be read as comma-separated text",
-                         "give a header x,y,value and one node per line", where) from fault
+        raise InputError(
+            "format",
+            str(fault).strip(),
+            "cannot be read as comma-separated text",
+            "give a header x,y,value and one node per line",
+            where,
+        ) from fault
     names = {str(column).strip(): str(column) for column in frame.columns}
     x_name, x_units = _csv_axis(names, "easting", _EASTINGS, where)
     y_name, y_units = _csv_axis(names, "northing", _NORTHINGS, where)
-    value = _choose({name: "mGal" if name.lower().endswith("mgal") else None
-                     for name in names if name not in (x_name, y_name)}, variable, where)
+    value = _choose(
+        {name: "mGal" if name.lower().endswith("mgal") else None for name in names if name not in (x_name, y_name)},
+        variable,
+        where,
+    )
     x, y, values = (_numbers(frame[names[name]], name, where) for name in (x_name, y_name, value))
     for name, column in ((x_name, x), (y_name, y)):
         if not np.isfinite(column).all():
-            raise InputError(name, "empty", f"is missing in data row {np.isnan(column).argmax() + 1}",
-                             "give every node its coordinates", where)
+            raise InputError(
+                name,
+                "empty",
+                f"is missing in data row {np.isnan(column).argmax() + 1}",
+                "give every node its coordinates",
+                where,
+            )
     x_axis, y_axis, grid = _lattice_from_rows(x, y, values, where)
     return RawGrid(x_axis, y_axis, grid, value, "mGal", x_units, y_units)
 
@@ -175,8 +207,13 @@ def _numbers(column: pd.Series, name: str, where: str) -> Array:
     words = column.notna() & numbers.isna() & (column.astype(str).str.strip().str.lower() != "nan")
     if words.any():
         place = int(np.asarray(words).argmax())
-        raise InputError(name, column.iloc[place], f"is not a number, in data row {place + 1}",
-                         "use a decimal point, and NaN or nothing where there are no data", where)
+        raise InputError(
+            name,
+            column.iloc[place],
+            f"is not a number, in data row {place + 1}",
+            "use a decimal point, and NaN or nothing where there are no data",
+            where,
+        )
     return np.asarray(numbers, dtype=float)
 
 
@@ -191,8 +228,13 @@ def _lattice_from_rows(x: Array, y: Array, values: Array, where: str) -> tuple[A
     ):
         if bad.any():
             j, i = divmod(int(bad.argmax()), x_axis.size)
-            raise InputError("node", f"({x_axis[i]:.10g}, {y_axis[j]:.10g})",
-                             f"{rule} ({int(bad.sum())} such of {y_axis.size} by {x_axis.size})", remedy, where)
+            raise InputError(
+                "node",
+                f"({x_axis[i]:.10g}, {y_axis[j]:.10g})",
+                f"{rule} ({int(bad.sum())} such of {y_axis.size} by {x_axis.size})",
+                remedy,
+                where,
+            )
     grid = np.empty(count.size)
     grid[node] = values
     return x_axis, y_axis, grid.reshape(y_axis.size, x_axis.size)
@@ -213,8 +255,13 @@ def _load_geotiff(path: Path, variable: str | None) -> RawGrid:
     try:
         import rasterio
     except ImportError as fault:
-        raise InputError("format", path.suffix, "needs the gis extra, which is not installed",
-                         "pip install 'gravbasin[gis]', or export the map as netCDF or CSV", where) from fault
+        raise InputError(
+            "format",
+            path.suffix,
+            "needs the gis extra, which is not installed",
+            "pip install 'gravbasin[gis]', or export the map as netCDF or CSV",
+            where,
+        ) from fault
     try:
         source = rasterio.open(path)
     except rasterio.errors.RasterioIOError as fault:
@@ -224,8 +271,13 @@ def _load_geotiff(path: Path, variable: str | None) -> RawGrid:
         name = _choose({key: source.units[i - 1] for key, i in bands.items()}, variable, where)
         transform, band = source.transform, bands[name]
         if transform.is_identity or transform.b or transform.d:
-            raise InputError("transform", tuple(transform)[:6], "must place the raster north up, without rotation",
-                             "warp it to a projected, unrotated grid", where)
+            raise InputError(
+                "transform",
+                tuple(transform)[:6],
+                "must place the raster north up, without rotation",
+                "warp it to a projected, unrotated grid",
+                where,
+            )
         values = source.read(band, masked=True).astype(float).filled(np.nan)
         values = values * source.scales[band - 1] + source.offsets[band - 1]
         point = source.tags().get("AREA_OR_POINT", "Area") == "Point"
@@ -233,8 +285,17 @@ def _load_geotiff(path: Path, variable: str | None) -> RawGrid:
         # GDAL moves PixelIsPoint rasters by half a cell on opening: its transform starts at a cell corner either way
         x = factor * (transform.c + transform.a * (np.arange(source.width) + 0.5))
         y = factor * (transform.f + transform.e * (np.arange(source.height) + 0.5))
-        return RawGrid(x, y, values, name, source.units[band - 1], "m", "m", crs_wkt=wkt,
-                       notes={"pixel": "point" if point else "area", "crs_metres_per_unit": factor})
+        return RawGrid(
+            x,
+            y,
+            values,
+            name,
+            source.units[band - 1],
+            "m",
+            "m",
+            crs_wkt=wkt,
+            notes={"pixel": "point" if point else "area", "crs_metres_per_unit": factor},
+        )
 
 
 def _raster_crs(crs: Any, where: str) -> tuple[float, str | None]:
@@ -245,6 +306,14 @@ def _raster_crs(crs: Any, where: str) -> tuple[float, str | None]:
     return float(crs.linear_units_factor[1]), str(crs.to_wkt())
 
 
-LOADERS = {".nc": _load_netcdf, ".nc4": _load_netcdf, ".cdf": _load_netcdf, ".grd": _load_netcdf, ".csv": _load_csv,
-           ".txt": _load_csv, ".tif": _load_geotiff, ".tiff": _load_geotiff}
+LOADERS = {
+    ".nc": _load_netcdf,
+    ".nc4": _load_netcdf,
+    ".cdf": _load_netcdf,
+    ".grd": _load_netcdf,
+    ".csv": _load_csv,
+    ".txt": _load_csv,
+    ".tif": _load_geotiff,
+    ".tiff": _load_geotiff,
+}
 """Reader by suffix; each takes (path, variable or None) and returns a RawGrid."""

@@ -79,8 +79,9 @@ def whiten(covariance: Array, design: Array, values: Array) -> Whitened:
     columns, target = both[:, :-1], both[:, -1]
     q, r = linalg.qr(columns, mode="economic", check_finite=False)
     coefficients = linalg.solve_triangular(r, q.T @ target, check_finite=False)
-    return Whitened(factor, columns, target - columns @ coefficients, coefficients, r,
-                    2.0 * float(np.log(np.diag(factor)).sum()))
+    return Whitened(
+        factor, columns, target - columns @ coefficients, coefficients, r, 2.0 * float(np.log(np.diag(factor)).sum())
+    )
 
 
 def covariance_of(nodes: Nodes, noise: NoiseModel) -> Array:

@@ -40,8 +40,13 @@ class Lattice:
             return keep
         easting, northing, radius = (float(v) for v in exclude)
         if not (np.isfinite([easting, northing, radius]).all() and radius > 0):
-            raise InputError("exclude", exclude, "must be (easting, northing, radius) in metres with radius > 0",
-                             "give the disc that holds the structure, or None", where)
+            raise InputError(
+                "exclude",
+                exclude,
+                "must be (easting, northing, radius) in metres with radius > 0",
+                "give the disc that holds the structure, or None",
+                where,
+            )
         return keep & (np.hypot(self.easting - easting, (self.northing - northing)[:, None]) > radius)
 
 
@@ -62,19 +67,34 @@ def even_axis(values: Array, name: str, *, where: str) -> Array:
     """The axis snapped to exactly even spacing, ascending or descending as given; InputError where it is not even."""
     values = np.asarray(values, dtype=float)
     if values.ndim != 1 or values.size < 2 or not np.isfinite(values).all():
-        raise InputError(name, f"array of shape {values.shape}", "must be one axis of at least 2 finite values",
-                         "give the cell centres along that axis, in metres", where)
+        raise InputError(
+            name,
+            f"array of shape {values.shape}",
+            "must be one axis of at least 2 finite values",
+            "give the cell centres along that axis, in metres",
+            where,
+        )
     steps = np.diff(values)
     typical = float(np.median(steps))
     even = np.linspace(values[0], values[-1], values.size)
     worst = np.abs(steps - typical).argmax()
     if typical == 0.0 or np.sign(steps).min() != np.sign(steps).max():
-        raise InputError(name, f"{values[worst]:g}, {values[worst + 1]:g}", "must rise or fall all along",
-                         "sort the axis and remove repeated nodes", where)
+        raise InputError(
+            name,
+            f"{values[worst]:g}, {values[worst + 1]:g}",
+            "must rise or fall all along",
+            "sort the axis and remove repeated nodes",
+            where,
+        )
     if np.abs(values - even).max() > EVEN_TOLERANCE * abs(typical):
         rule = f"must be evenly spaced: a step of {abs(steps[worst]):.10g} meets steps of {abs(typical):.10g}"
-        raise InputError(name, f"{values[worst]:.10g} to {values[worst + 1]:.10g}", rule,
-                         "fill the gap with NaN nodes or grid the data again on an even lattice", where)
+        raise InputError(
+            name,
+            f"{values[worst]:.10g} to {values[worst + 1]:.10g}",
+            rule,
+            "fill the gap with NaN nodes or grid the data again on an even lattice",
+            where,
+        )
     return even
 
 
@@ -87,11 +107,21 @@ def lattice_of(observed: xr.DataArray, *, where: str) -> Lattice:
         Not a DataArray with dims (northing, easting), uneven or descending axes, units other than mGal, infinities.
     """
     if not isinstance(observed, xr.DataArray):
-        raise InputError("observed", type(observed).__name__, "must be an xarray DataArray",
-                         "pass what read_grid returns, or one variable of a Dataset", where)
+        raise InputError(
+            "observed",
+            type(observed).__name__,
+            "must be an xarray DataArray",
+            "pass what read_grid returns, or one variable of a Dataset",
+            where,
+        )
     if observed.dims != ("northing", "easting") or not {"northing", "easting"} <= set(observed.coords):
-        raise InputError("observed.dims", observed.dims, 'must be ("northing", "easting"), both with coordinates',
-                         "transpose or rename, or read the file with read_grid", where)
+        raise InputError(
+            "observed.dims",
+            observed.dims,
+            'must be ("northing", "easting"), both with coordinates',
+            "transpose or rename, or read the file with read_grid",
+            where,
+        )
     units = observed.attrs.get("units", "mGal")
     if units != "mGal":
         raise InputError("observed.units", units, "must be mGal", "convert it, or read the file with read_grid", where)
@@ -99,8 +129,13 @@ def lattice_of(observed: xr.DataArray, *, where: str) -> Lattice:
     for name in ("easting", "northing"):
         axis = even_axis(observed[name].values, f"observed.{name}", where=where)
         if axis[1] < axis[0]:
-            raise InputError(f"observed.{name}", f"{axis[0]:g} to {axis[-1]:g}", "must ascend",
-                             f'sort it: observed.sortby("{name}")', where)
+            raise InputError(
+                f"observed.{name}",
+                f"{axis[0]:g} to {axis[-1]:g}",
+                "must ascend",
+                f'sort it: observed.sortby("{name}")',
+                where,
+            )
         axes[name] = axis
     values = np.asarray(observed.values, dtype=float)
     if np.isinf(values).any():
@@ -134,7 +169,10 @@ def thin(
 
 
 def _spread(
-    open_nodes: NDArray[np.bool_], rows: NDArray[np.int64], columns: NDArray[np.int64], count: int,
+    open_nodes: NDArray[np.bool_],
+    rows: NDArray[np.int64],
+    columns: NDArray[np.int64],
+    count: int,
     rng: np.random.Generator,
 ) -> NDArray[np.int64]:
     """Flat indices of `count` of the nodes: one per block, then neighbours of those, then any."""

@@ -50,8 +50,13 @@ class Sample:
 
 
 def importance_sample(
-    density: Callable[[Array], tuple[float, float]], centre: Array, covariance: Array, *, bounds: Array,
-    rng: np.random.Generator, sizes: tuple[int, ...],
+    density: Callable[[Array], tuple[float, float]],
+    centre: Array,
+    covariance: Array,
+    *,
+    bounds: Array,
+    rng: np.random.Generator,
+    sizes: tuple[int, ...],
 ) -> Sample:
     """Sample a posterior whose whereabouts are roughly known.
 
@@ -97,7 +102,11 @@ def importance_sample(
 
 
 def _propose(
-    centre: Array, factor: Array, bounds: Array, size: int, rng: np.random.Generator,
+    centre: Array,
+    factor: Array,
+    bounds: Array,
+    size: int,
+    rng: np.random.Generator,
 ) -> tuple[Array, float]:
     """`size` points of the Student proposal inside the box, and how many it took to find them."""
     kept, tried = np.empty((0, centre.size)), 0

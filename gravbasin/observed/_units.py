@@ -7,13 +7,36 @@ from gravbasin.errors import InputError
 __all__ = ["is_degrees", "is_gravity", "length_factor", "mgal_factor"]
 
 _GRAVITY = {
-    "mgal": 1.0, "mgals": 1.0, "milligal": 1.0, "milligals": 1.0, "1e-5 m s-2": 1.0, "10-5 m s-2": 1.0,
-    "m s-2": 1e5, "m/s2": 1e5, "m/s/s": 1e5, "m.s-2": 1e5, "metre/second2": 1e5, "meter/second2": 1e5,
-    "um s-2": 0.1, "um/s2": 0.1, "um.s-2": 0.1, "gravity unit": 0.1, "gravity units": 0.1, "g.u.": 0.1,
+    "mgal": 1.0,
+    "mgals": 1.0,
+    "milligal": 1.0,
+    "milligals": 1.0,
+    "1e-5 m s-2": 1.0,
+    "10-5 m s-2": 1.0,
+    "m s-2": 1e5,
+    "m/s2": 1e5,
+    "m/s/s": 1e5,
+    "m.s-2": 1e5,
+    "metre/second2": 1e5,
+    "meter/second2": 1e5,
+    "um s-2": 0.1,
+    "um/s2": 0.1,
+    "um.s-2": 0.1,
+    "gravity unit": 0.1,
+    "gravity units": 0.1,
+    "g.u.": 0.1,
 }
 _LENGTH = {
-    "m": 1.0, "metre": 1.0, "metres": 1.0, "meter": 1.0, "meters": 1.0,
-    "km": 1e3, "kilometre": 1e3, "kilometres": 1e3, "kilometer": 1e3, "kilometers": 1e3,
+    "m": 1.0,
+    "metre": 1.0,
+    "metres": 1.0,
+    "meter": 1.0,
+    "meters": 1.0,
+    "km": 1e3,
+    "kilometre": 1e3,
+    "kilometres": 1e3,
+    "kilometer": 1e3,
+    "kilometers": 1e3,
 }
 
 
@@ -35,8 +58,13 @@ def is_degrees(units: str | None) -> bool:
 def mgal_factor(units: str, *, what: str, where: str) -> float:
     """What to multiply values in these units by to have mGal."""
     if not is_gravity(units):
-        raise InputError(what, units, "must be a unit of gravity: mGal, m s-2 or um s-2",
-                         'correct the file, or choose another variable', where)
+        raise InputError(
+            what,
+            units,
+            "must be a unit of gravity: mGal, m s-2 or um s-2",
+            "correct the file, or choose another variable",
+            where,
+        )
     return _GRAVITY[_plain(units)]
 
 

@@ -158,8 +158,11 @@ def _log_prior(theta: Array) -> float:
     log_range, log_smoothness, log_ratio = theta
     low, high = _SMOOTH_FLAT
     beyond = max(low - math.exp(log_smoothness), math.exp(log_smoothness) - high, 0.0) / _SMOOTH_SHOULDER
-    terms = ((log_range - math.log(_RANGE_MEDIAN_M)) / _RANGE_SCATTER, beyond,
-             (log_ratio - math.log(_NUGGET_MEDIAN)) / _NUGGET_SCATTER)
+    terms = (
+        (log_range - math.log(_RANGE_MEDIAN_M)) / _RANGE_SCATTER,
+        beyond,
+        (log_ratio - math.log(_NUGGET_MEDIAN)) / _NUGGET_SCATTER,
+    )
     return log_smoothness - 0.5 * sum(t**2 for t in terms)  # ln(smoothness): flat in smoothness, not its logarithm
 
 
@@ -177,7 +180,10 @@ def _mode(problem: _Problem) -> Array:
     inward = np.where(start > 0.5 * (low + high), -1.0, 1.0) * np.array([0.4, 0.3, 0.7])
     simplex = np.clip(np.vstack([start, start + np.diag(inward)]), low, high)
     found = optimize.minimize(
-        lambda theta: problem.objective(theta)[0], start, method="Nelder-Mead", bounds=problem.bounds,
+        lambda theta: problem.objective(theta)[0],
+        start,
+        method="Nelder-Mead",
+        bounds=problem.bounds,
         options={"initial_simplex": simplex, "xatol": 0.1, "fatol": 0.1, "maxfev": 60},
     )
     return np.asarray(found.x)
@@ -190,12 +196,17 @@ def _sample(problem: _Problem, rng: np.random.Generator) -> Sample:
         value, log_sill = problem.objective(theta)
         return -value, log_sill
 
-    return importance_sample(density, _mode(problem), np.diag(_FIRST_SCATTER**2), bounds=problem.bounds, rng=rng,
-                             sizes=_ROUNDS)
+    return importance_sample(
+        density, _mode(problem), np.diag(_FIRST_SCATTER**2), bounds=problem.bounds, rng=rng, sizes=_ROUNDS
+    )
 
 
 def _model(
-    problem: _Problem, sample: Sample, regional_order: int, resolution: float, rng: np.random.Generator,
+    problem: _Problem,
+    sample: Sample,
+    regional_order: int,
+    resolution: float,
+    rng: np.random.Generator,
 ) -> NoiseModel:
     centre = sample.mean
     fit = problem.solve(centre)
@@ -207,7 +218,13 @@ def _model(
     log_range, log_smoothness, log_ratio = sample.points[pick].T
     posterior = np.column_stack([log_sill, log_range, log_smoothness, log_ratio + log_sill])
     return NoiseModel(
-        sill_mgal=sill, range_m=range_m, smoothness=smoothness, nugget_mgal=ratio * sill,
-        regional_order=regional_order, posterior=tuple(map(tuple, posterior.tolist())),
-        n_points=problem.values.size, log_likelihood=-problem.minus_log_likelihood(fit), resolution_m=resolution,
+        sill_mgal=sill,
+        range_m=range_m,
+        smoothness=smoothness,
+        nugget_mgal=ratio * sill,
+        regional_order=regional_order,
+        posterior=tuple(map(tuple, posterior.tolist())),
+        n_points=problem.values.size,
+        log_likelihood=-problem.minus_log_likelihood(fit),
+        resolution_m=resolution,
     )

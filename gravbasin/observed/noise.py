@@ -151,8 +151,12 @@ class NoiseModel:
     def as_dict(self) -> dict[str, Any]:
         """The model in the units and names of verdict.json; estimated models add their errors and number of nodes."""
         plain: dict[str, Any] = {
-            "model": self.model, "sill_mgal": self.sill_mgal, "range_km": self.range_m / 1e3,
-            "smoothness": self.smoothness, "nugget_mgal": self.nugget_mgal, "regional_order": self.regional_order,
+            "model": self.model,
+            "sill_mgal": self.sill_mgal,
+            "range_km": self.range_m / 1e3,
+            "smoothness": self.smoothness,
+            "nugget_mgal": self.nugget_mgal,
+            "regional_order": self.regional_order,
         }
         if self.posterior is not None:
             plain["relative_errors"] = self.relative_errors
@@ -192,7 +196,15 @@ class NoiseModel:
             values = np.exp(logs[rng.choice(len(logs), size=n, replace=n > len(logs))])
         values[:, [0, 3]] *= level[:, None]
         return [
-            replace(self, sill_mgal=sill, range_m=range_m, smoothness=smoothness, nugget_mgal=nugget, posterior=None,
-                    n_points=0, log_likelihood=None)
+            replace(
+                self,
+                sill_mgal=sill,
+                range_m=range_m,
+                smoothness=smoothness,
+                nugget_mgal=nugget,
+                posterior=None,
+                n_points=0,
+                log_likelihood=None,
+            )
             for sill, range_m, smoothness, nugget in values.tolist()
         ]

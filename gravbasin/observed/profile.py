@@ -18,7 +18,13 @@ from gravbasin.observed.noise import NoiseModel
 from gravbasin.observed.simulate import torus_covariance
 
 __all__ = [
-    "RingMeans", "radial_profile", "ring_covariance", "ring_edges", "ring_means", "ring_radii", "stencil_axes",
+    "RingMeans",
+    "radial_profile",
+    "ring_covariance",
+    "ring_edges",
+    "ring_means",
+    "ring_radii",
+    "stencil_axes",
 ]
 
 
@@ -63,7 +69,10 @@ class RingMeans:
 
 
 def ring_edges(
-    observed: xr.DataArray, centre: tuple[float, float] = (0.0, 0.0), *, width_m: float | None = None,
+    observed: xr.DataArray,
+    centre: tuple[float, float] = (0.0, 0.0),
+    *,
+    width_m: float | None = None,
     radius_m: float | None = None,
 ) -> Array:
     """Edges of rings of equal width from the centre outwards.
@@ -93,20 +102,37 @@ def ring_edges(
 
 
 def _default_edges(
-    lattice: Lattice, centre: tuple[float, float], width_m: float | None, radius_m: float | None,
+    lattice: Lattice,
+    centre: tuple[float, float],
+    width_m: float | None,
+    radius_m: float | None,
 ) -> Array:
     half_n, half_e = (0.5 * step for step in lattice.spacing)
     easting, northing = (float(c) for c in centre)
-    room = min(easting - lattice.easting[0] + half_e, lattice.easting[-1] + half_e - easting,
-               northing - lattice.northing[0] + half_n, lattice.northing[-1] + half_n - northing)
+    room = min(
+        easting - lattice.easting[0] + half_e,
+        lattice.easting[-1] + half_e - easting,
+        northing - lattice.northing[0] + half_n,
+        lattice.northing[-1] + half_n - northing,
+    )
     if not room > 0:
-        raise InputError("centre", centre, f"must lie inside the map, {_extent(lattice)}",
-                         "give (easting, northing) in metres", "ring_edges")
+        raise InputError(
+            "centre",
+            centre,
+            f"must lie inside the map, {_extent(lattice)}",
+            "give (easting, northing) in metres",
+            "ring_edges",
+        )
     width = max(lattice.spacing) if width_m is None else float(width_m)
     reach = float(room) if radius_m is None else float(radius_m)
     if not (width > 0 and reach >= 3.0 * width * (1 - 1e-9)):
-        raise InputError("centre", centre, f"has room for {reach / width:.2g} rings of {width:g} m, of three needed",
-                         "move the centre, narrow the rings or use a wider map", "ring_edges")
+        raise InputError(
+            "centre",
+            centre,
+            f"has room for {reach / width:.2g} rings of {width:g} m, of three needed",
+            "move the centre, narrow the rings or use a wider map",
+            "ring_edges",
+        )
     return width * np.arange(float(int(reach / width * (1 + 1e-12)) + 1))
 
 
@@ -159,15 +185,21 @@ def _ring_means(lattice: Lattice, centre: tuple[float, float], edges_m: ArrayLik
     share.eliminate_zeros()
     cells = np.asarray(share.sum(axis=1)).ravel()
     if not cells.any():
-        raise InputError("centre", centre, f"has no data within {edges[-1]:g} m on a map of {_extent(lattice)}",
-                         "give (easting, northing) in metres on the map", "ring_means")
+        raise InputError(
+            "centre",
+            centre,
+            f"has no data within {edges[-1]:g} m on a map of {_extent(lattice)}",
+            "give (easting, northing) in metres on the map",
+            "ring_means",
+        )
     scale = np.divide(1.0, cells, out=np.zeros_like(cells), where=cells > 0)
     weights = sparse.csr_array(sparse.dia_array((scale[None], [0]), shape=(cells.size, cells.size)) @ share)
     mean = np.where(cells > 0, weights @ np.where(valid, lattice.values.ravel(), 0.0), np.nan)
     area = cells * step_n * step_e
     coverage = np.minimum(area / (np.pi * np.diff(edges**2)), 1.0)
-    return RingMeans(centre, edges, ring_radii(edges), weights, mean, coverage, area, lattice.values.shape,
-                     lattice.spacing)
+    return RingMeans(
+        centre, edges, ring_radii(edges), weights, mean, coverage, area, lattice.values.shape, lattice.spacing
+    )
 
 
 def stencil_axes(edges_m: ArrayLike, spacing_m: tuple[float, float]) -> tuple[Array, Array]:
@@ -183,7 +215,11 @@ def stencil_axes(edges_m: ArrayLike, spacing_m: tuple[float, float]) -> tuple[Ar
 
 
 def ring_covariance(
-    weights: sparse.csr_array, noise: NoiseModel, *, shape: tuple[int, int], spacing_m: tuple[float, float],
+    weights: sparse.csr_array,
+    noise: NoiseModel,
+    *,
+    shape: tuple[int, int],
+    spacing_m: tuple[float, float],
 ) -> Array:
     """Exact covariance of weighted sums of map cells under the noise.
 
@@ -210,15 +246,21 @@ def ring_covariance(
     """
     weights = sparse.csr_array(weights)
     if weights.shape[1] != shape[0] * shape[1]:
-        raise InputError("shape", shape, f"must have as many cells as the weights, {weights.shape[1]}",
-                         "give (n_northing, n_easting) of the weights' lattice", "ring_covariance")
+        raise InputError(
+            "shape",
+            shape,
+            f"must have as many cells as the weights, {weights.shape[1]}",
+            "give (n_northing, n_easting) of the weights' lattice",
+            "ring_covariance",
+        )
     rows, columns = np.divmod(weights.indices, shape[1])
     if rows.size == 0:
         return np.zeros((weights.shape[0], weights.shape[0]))
     rows, columns = rows - rows.min(), columns - columns.min()
     box = (int(rows.max()) + 1, int(columns.max()) + 1)
-    boxed = sparse.csr_array((weights.data, rows * box[1] + columns, weights.indptr),
-                             shape=(weights.shape[0], box[0] * box[1]))
+    boxed = sparse.csr_array(
+        (weights.data, rows * box[1] + columns, weights.indptr), shape=(weights.shape[0], box[0] * box[1])
+    )
     torus = (fft.next_fast_len(2 * box[0], real=True), fft.next_fast_len(2 * box[1], real=True))
     kernel = fft.rfft2(torus_covariance(noise, torus, spacing_m)).real
     result = np.empty((weights.shape[0],) * 2)
@@ -306,10 +348,18 @@ def _dataset(rings: RingMeans, standard_error: Array, noise: NoiseModel, exclude
     }
     coords = {"radius": rings.radius_m}
     return xr.Dataset(
-        {name: data_array(values, ("radius",), coords, name=name, units=units, long_name=text)
-         for name, (values, units, text) in columns.items()},
+        {
+            name: data_array(values, ("radius",), coords, name=name, units=units, long_name=text)
+            for name, (values, units, text) in columns.items()
+        },
         coords={"radius_edges": coordinate("radius_edges", rings.edges_m)},
-        attrs={"title": "ring means of a gravity map", "provenance": provenance(
-            centre_m=rings.centre, noise=noise.as_dict(), noise_estimated_outside=excluded,
-            empty_rings=int((rings.area_m2 == 0).sum()))},
+        attrs={
+            "title": "ring means of a gravity map",
+            "provenance": provenance(
+                centre_m=rings.centre,
+                noise=noise.as_dict(),
+                noise_estimated_outside=excluded,
+                empty_rings=int((rings.area_m2 == 0).sum()),
+            ),
+        },
     )

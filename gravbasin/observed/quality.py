@@ -46,7 +46,12 @@ class NoiseCheck:
 
 
 def check_noise(
-    observed: xr.DataArray, noise: NoiseModel, exclude: Disc | None = None, *, blocks: int = 6, max_points: int = 700,
+    observed: xr.DataArray,
+    noise: NoiseModel,
+    exclude: Disc | None = None,
+    *,
+    blocks: int = 6,
+    max_points: int = 700,
     seed: int | np.random.Generator = 1,
 ) -> NoiseCheck:
     """Leave each of blocks × blocks squares of the map out and predict it, regional included, from the rest.
@@ -88,12 +93,22 @@ def check_noise(
         raise InputError("blocks", blocks, "must be 2 or more", "6 is usual", where)
     lattice = lattice_of(observed, where=where)
     separation = noise.resolution_m or 2.0 * max(lattice.spacing)
-    nodes = thin(lattice, lattice.valid(exclude, where=where), separation_m=separation, max_points=max_points,
-                 rng=np.random.default_rng(seed))
+    nodes = thin(
+        lattice,
+        lattice.valid(exclude, where=where),
+        separation_m=separation,
+        max_points=max_points,
+        rng=np.random.default_rng(seed),
+    )
     count = nodes.values.size
     if count < MIN_NODES:
-        raise InputError("exclude", exclude, f"leaves {count} independent nodes, of which a check needs {MIN_NODES}",
-                         "use a wider map or a smaller disc", where)
+        raise InputError(
+            "exclude",
+            exclude,
+            f"leaves {count} independent nodes, of which a check needs {MIN_NODES}",
+            "use a wider map or a smaller disc",
+            where,
+        )
     precision, projected = _projected_precision(nodes, noise)
     members = _blocks(nodes, blocks)
     chi_square = np.empty(len(members))
@@ -106,9 +121,14 @@ def check_noise(
     scale = variance / (2.0 * count)
     below = float(stats.chi2.cdf(total / scale, count / scale))
     sizes = np.array([block.size for block in members])
-    return NoiseCheck(ratio=total / count, standard_error=math.sqrt(variance) / count,
-                      p_value=2.0 * min(below, 1.0 - below), worst_block=float((chi_square / sizes).max()),
-                      n_points=count, n_blocks=len(members))
+    return NoiseCheck(
+        ratio=total / count,
+        standard_error=math.sqrt(variance) / count,
+        p_value=2.0 * min(below, 1.0 - below),
+        worst_block=float((chi_square / sizes).max()),
+        n_points=count,
+        n_blocks=len(members),
+    )
 
 
 def _projected_precision(nodes: Nodes, noise: NoiseModel) -> tuple[Array, Array]:

@@ -78,8 +78,13 @@ def read_grid(
     if not path.is_file():
         raise InputError("path", path, "is not a file", "check the path", "read_grid")
     if path.suffix.lower() not in LOADERS:
-        raise InputError("path", path.name, f"must end in one of {', '.join(LOADERS)}",
-                         "export the map in one of these formats", "read_grid")
+        raise InputError(
+            "path",
+            path.name,
+            f"must end in one of {', '.join(LOADERS)}",
+            "export the map in one of these formats",
+            "read_grid",
+        )
     raw = LOADERS[path.suffix.lower()](path, variable)
     where = path.name
     factor, stated = _value_units(raw, units, where)
@@ -93,13 +98,25 @@ def read_grid(
         flips.append("northing")
     missing = _check_values(x, y, values, nan, where)
     facts = provenance(
-        file=path.name, sha256=_sha256(path), variable=raw.variable, nan_count=missing, flips=flips,
-        value_units=stated, coordinate_units=lengths, **raw.notes,
+        file=path.name,
+        sha256=_sha256(path),
+        variable=raw.variable,
+        nan_count=missing,
+        flips=flips,
+        value_units=stated,
+        coordinate_units=lengths,
+        **raw.notes,
     )
     attrs = {"crs_wkt": raw.crs_wkt} if raw.crs_wkt else {}
     return data_array(
-        np.ascontiguousarray(values), ("northing", "easting"), {"northing": y, "easting": x}, name="anomaly",
-        units="mGal", long_name=raw.long_name or "gravity anomaly", **attrs, provenance=facts,
+        np.ascontiguousarray(values),
+        ("northing", "easting"),
+        {"northing": y, "easting": x},
+        name="anomaly",
+        units="mGal",
+        long_name=raw.long_name or "gravity anomaly",
+        **attrs,
+        provenance=facts,
     )
 
 
@@ -108,8 +125,13 @@ def _value_units(raw: RawGrid, given: str | None, where: str) -> tuple[float, st
     what = f"{raw.variable}.units"
     stated = raw.units.strip() if raw.units else None
     if given is None and not stated:
-        raise InputError(what, "missing", "the file does not state the units of its values",
-                         'say what they are, for instance units="mGal"', where)
+        raise InputError(
+            what,
+            "missing",
+            "the file does not state the units of its values",
+            'say what they are, for instance units="mGal"',
+            where,
+        )
     factors = [mgal_factor(text, what=name, where=where) for text, name in ((given, "units"), (stated, what)) if text]
     if len(set(factors)) > 1:
         raise InputError("units", given, f"contradicts the file, which states {stated}", "leave units out", where)
@@ -122,8 +144,13 @@ def _axes_in_metres(raw: RawGrid, given: str | None, where: str) -> tuple[Array,
     for name, values, stated in (("easting", raw.x, raw.x_units), ("northing", raw.y, raw.y_units)):
         units = given if given is not None else stated
         if units is None:
-            raise InputError(f"{name}.units", "missing", "the file does not state the units of its coordinates",
-                             'say what they are, for instance coordinate_units="m"', where)
+            raise InputError(
+                f"{name}.units",
+                "missing",
+                "the file does not state the units of its coordinates",
+                'say what they are, for instance coordinate_units="m"',
+                where,
+            )
         factor = length_factor(units, what=f"{name} units", where=where)
         if values.size < MIN_SIDE:
             raise InputError(name, f"{values.size} nodes", f"must have {MIN_SIDE} or more", "give a wider map", where)
@@ -131,8 +158,13 @@ def _axes_in_metres(raw: RawGrid, given: str | None, where: str) -> tuple[Array,
         names.append(units)
     x, y = axes
     if np.abs(x).max() <= 360.0 and np.abs(y).max() <= 90.0:  # a map within 360 m by 180 m of the origin: no survey
-        raise InputError("coordinates", f"{x.min():g} to {x.max():g}, {y.min():g} to {y.max():g}",
-                         "must be metres; these look like degrees", "project the map to metres first", where)
+        raise InputError(
+            "coordinates",
+            f"{x.min():g} to {x.max():g}, {y.min():g} to {y.max():g}",
+            "must be metres; these look like degrees",
+            "project the map to metres first",
+            where,
+        )
     return x, y, names[0] if names[0] == names[1] else ", ".join(names)
 
 
@@ -145,12 +177,22 @@ def _check_values(x: Array, y: Array, values: Array, nan: str, where: str) -> in
     if missing and (nan == "refuse" or missing == gaps.size):
         j, i = divmod(int(gaps.argmax()), x.size)
         remedy = 'use nan="skip" to leave them out' if missing < gaps.size else "choose another variable"
-        raise InputError("values", f"{missing} of {gaps.size} are NaN",
-                         f"must be numbers; the first is missing at ({x[i]:.10g}, {y[j]:.10g})", remedy, where)
+        raise InputError(
+            "values",
+            f"{missing} of {gaps.size} are NaN",
+            f"must be numbers; the first is missing at ({x[i]:.10g}, {y[j]:.10g})",
+            remedy,
+            where,
+        )
     largest = float(np.nanmax(np.abs(values)))
     if largest > LARGEST_MGAL:
-        raise InputError("values", f"{largest:g} mGal", f"must be within ±{LARGEST_MGAL:g} mGal",
-                         "mark fill values as such in the file, or correct its units", where)
+        raise InputError(
+            "values",
+            f"{largest:g} mGal",
+            f"must be within ±{LARGEST_MGAL:g} mGal",
+            "mark fill values as such in the file, or correct its units",
+            where,
+        )
     if np.nanmax(values) == np.nanmin(values):
         raise InputError("values", f"{np.nanmax(values):g} everywhere", "must vary", "choose another variable", where)
     return missing

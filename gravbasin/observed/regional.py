@@ -20,7 +20,11 @@ MAX_NODES = 1500  # dense solve: 0.1 s and 20 MB; more nodes of a correlated fie
 
 
 def polynomial_basis(
-    easting: ArrayLike, northing: ArrayLike, order: int, *, centre: tuple[float, float] | None = None,
+    easting: ArrayLike,
+    northing: ArrayLike,
+    order: int,
+    *,
+    centre: tuple[float, float] | None = None,
     scale: float | None = None,
 ) -> Array:
     """Columns of a polynomial regional at scattered positions.
@@ -53,7 +57,11 @@ def polynomial_basis(
 
 
 def fit_regional(
-    observed: xr.DataArray, noise: NoiseModel, *, exclude: Disc | None = None, order: int | None = None,
+    observed: xr.DataArray,
+    noise: NoiseModel,
+    *,
+    exclude: Disc | None = None,
+    order: int | None = None,
 ) -> xr.Dataset:
     """Regional and residual of a map by generalised least squares under its noise.
 
@@ -84,11 +92,21 @@ def fit_regional(
     where = "fit_regional"
     lattice = lattice_of(observed, where=where)
     order = noise.regional_order if order is None else order
-    nodes = thin(lattice, lattice.valid(exclude, where=where), separation_m=noise.resolution_m or 0.0,
-                 max_points=MAX_NODES, rng=np.random.default_rng(0))
+    nodes = thin(
+        lattice,
+        lattice.valid(exclude, where=where),
+        separation_m=noise.resolution_m or 0.0,
+        max_points=MAX_NODES,
+        rng=np.random.default_rng(0),
+    )
     if nodes.values.size < 30:
-        raise InputError("exclude", exclude, f"leaves {nodes.values.size} nodes, of which a regional needs 30",
-                         "make the disc smaller or the map wider", where)
+        raise InputError(
+            "exclude",
+            exclude,
+            f"leaves {nodes.values.size} nodes, of which a regional needs 30",
+            "make the disc smaller or the map wider",
+            where,
+        )
     frame = _frame(lattice)
     design = polynomial_basis(nodes.easting, nodes.northing, order, **frame)
     fit = whiten(covariance_of(nodes, noise), design, nodes.values)
@@ -96,8 +114,14 @@ def fit_regional(
     spread = linalg.solve_triangular(fit.coefficient_factor, columns.T, trans="T", check_finite=False)
     shape = lattice.values.shape
     regional = (columns @ fit.coefficients).reshape(shape)
-    facts = provenance(noise=noise.as_dict(), order=order, exclude=exclude, nodes=nodes.values.size,
-                       coefficients_mgal=fit.coefficients, **frame)
+    facts = provenance(
+        noise=noise.as_dict(),
+        order=order,
+        exclude=exclude,
+        nodes=nodes.values.size,
+        coefficients_mgal=fit.coefficients,
+        **frame,
+    )
     maps = {
         "regional": (regional, "polynomial regional, for display only"),
         "residual": (lattice.values - regional, "anomaly less the polynomial regional, for display only"),
@@ -105,8 +129,10 @@ def fit_regional(
     }
     coords = {"northing": lattice.northing, "easting": lattice.easting}
     return xr.Dataset(
-        {name: data_array(values, ("northing", "easting"), coords, name=name, units="mGal", long_name=text)
-         for name, (values, text) in maps.items()},
+        {
+            name: data_array(values, ("northing", "easting"), coords, name=name, units="mGal", long_name=text)
+            for name, (values, text) in maps.items()
+        },
         attrs={"title": "regional and residual of a gravity map", "provenance": facts},
     )
 
@@ -114,5 +140,7 @@ def fit_regional(
 def _frame(lattice: Lattice) -> dict:
     """Origin and scale of the polynomial: the middle of the map and half its longer side."""
     (west, east), (south, north) = ((axis[0], axis[-1]) for axis in (lattice.easting, lattice.northing))
-    return {"centre": (0.5 * float(west + east), 0.5 * float(south + north)),
-            "scale": 0.5 * float(max(east - west, north - south))}
+    return {
+        "centre": (0.5 * float(west + east), 0.5 * float(south + north)),
+        "scale": 0.5 * float(max(east - west, north - south)),
+    }

@@ -84,11 +84,22 @@ def simulate_noise(
     if noise.nugget_mgal > 0:
         for field in fields:
             field += noise.nugget_mgal * nugget_rng.standard_normal(shape)
-    facts = provenance(noise=noise.as_dict(), seed=seed if isinstance(seed, int) else "generator",
-                       embedding=list(amplitude.shape), lowest_eigenvalue_ratio=lowest)
+    facts = provenance(
+        noise=noise.as_dict(),
+        seed=seed if isinstance(seed, int) else "generator",
+        embedding=list(amplitude.shape),
+        lowest_eigenvalue_ratio=lowest,
+    )
     dims = ("northing", "easting") if n == 1 else ("draw", "northing", "easting")
-    return data_array(fields[0] if n == 1 else fields, dims, {"northing": northing, "easting": easting},
-                      name="noise", units="mGal", long_name="simulated gravity noise", provenance=facts)
+    return data_array(
+        fields[0] if n == 1 else fields,
+        dims,
+        {"northing": northing, "easting": easting},
+        name="noise",
+        units="mGal",
+        long_name="simulated gravity noise",
+        provenance=facts,
+    )
 
 
 def torus_covariance(noise: NoiseModel, shape: tuple[int, int], spacing: tuple[float, float]) -> Array:

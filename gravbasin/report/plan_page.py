@@ -313,7 +313,9 @@ def _assumptions(result: Planned) -> list[str]:
         "because they are interpolated from stations whose places they do not tell.",
         "Distances are straight lines from station to station; real ways are longer. Stations where nobody can stand "
         "must be moved, which costs little as long as they stay within a quarter of the spacing.",
-        "Centre and size count as known." if survey.place == "given" else "Centre and size count as searched for over "
+        "Centre and size count as known."
+        if survey.place == "given"
+        else "Centre and size count as searched for over "
         f"the area and the prior's diameters: {number(result.ceiling.trials, 2)} trials at the closest spacing.",
         "Details of shape that the scatter of the size laws blurs count as noise, so a sharply modelled rim proves "
         "nothing.",

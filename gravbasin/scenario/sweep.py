@@ -73,7 +73,10 @@ class Sweep(Table):
     )
     layers: int = Field(40, ge=20, le=400, description="layers of a case's section")
     rings: int = Field(
-        80, ge=40, le=800, description="rings across the smallest structure; a sweep over sizes adds as many as it needs"
+        80,
+        ge=40,
+        le=800,
+        description="rings across the smallest structure; a sweep over sizes adds as many as it needs",
     )
 
     @model_validator(mode="after")

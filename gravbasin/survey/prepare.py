@@ -156,9 +156,7 @@ def prepare(
     )
     templates = own.profiles[0].T
     height, seed = scenario.model.station_height_m, scenario.seed
-    impacts = build_bank(
-        family, radius, models=2 * survey.models, height=height, rng=np.random.default_rng([seed, 10])
-    )
+    impacts = build_bank(family, radius, models=2 * survey.models, height=height, rng=np.random.default_rng([seed, 10]))
     noises = plausible_noises(survey, noise, seed)
     plane = Plane.of(radius)
     banks = _rival_banks(scenario, survey, plane.gram([noises[0]]).gram[0], radius, templates)

@@ -142,9 +142,7 @@ def transformed(points: Array, stated: str | None, crs: Any, *, what: str, where
     degrees = is_degrees(points)
     if degrees and crs is None:
         shown = ", ".join(f"{a:.6g} to {b:.6g}" for a, b in zip(points.min(axis=0), points.max(axis=0), strict=True))
-        raise InputError(
-            what, shown, "is in degrees", "state survey.crs (as EPSG:32633), or give it in metres", where
-        )
+        raise InputError(what, shown, "is in degrees", "state survey.crs (as EPSG:32633), or give it in metres", where)
     if crs is None or (stated is None and not degrees):
         return points
     from pyproj import CRS, Transformer

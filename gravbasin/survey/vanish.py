@@ -274,9 +274,7 @@ def last_crossing(levels: Array, values: Array, required: float) -> Array:
     return found
 
 
-def chart_of(
-    scenario: Scenario, worn: Sequence[Worn], sight: Sight, curves: Curves, *, threshold: float
-) -> Chart:
+def chart_of(scenario: Scenario, worn: Sequence[Worn], sight: Sight, curves: Curves, *, threshold: float) -> Chart:
     """Detectability of several diameters, all worn to the same levels."""
     from scipy import stats
 
