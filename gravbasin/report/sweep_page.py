@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import json
 from collections import Counter
-from functools import cache
 from itertools import combinations
 from typing import TYPE_CHECKING, Any
 
@@ -14,6 +13,7 @@ from numpy.typing import NDArray
 
 from gravbasin import labels
 from gravbasin.report.canvas import svg
+from gravbasin.report.html import template
 from gravbasin.report.sweep_figures import heat_figure
 from gravbasin.report.words import given, number
 from gravbasin.runs.sampling import Axis
@@ -21,13 +21,18 @@ from gravbasin.runs.sensitivity import Bins, Ranking, bins_of, means_over, ranki
 from gravbasin.runs.variants import description_of, unit_of
 
 if TYPE_CHECKING:
-    from jinja2 import Template
-
     from gravbasin.scenario import Scenario, Sweep
 
 __all__ = ["sweep_report"]
 
 Array = NDArray[np.float64]
+
+CAUTIONS = (
+    "Every number is of a model under the noise of the scenario: no case was compared with a map.",
+    "Gravity alone never proves an impact, and other bodies can make the same anomaly; a case that would be seen is not "
+    "yet a case that could be told from its rivals.",
+    "Field safety, land access and drilling are matters for licensed practice and local rules.",
+)
 
 SHOWN_CASES = 4000
 """Cases in the page's own table; cases.csv and cases.nc hold all."""
@@ -59,11 +64,12 @@ def sweep_report(scenario: Scenario, cases: xr.Dataset) -> str:
     scalars = [str(n) for n in cases.data_vars if n not in {*names, "failure"}]
     bins = {name: bins_of(cases, Axis.of(f)) for name, f in zip(names, sweep.fields, strict=True)}
     ranks = {s: ranking(cases, sweep, s) for s in RANKED if s in scalars and np.isfinite(cases[s]).any()}
-    pair = _first_pair(names, ranks)
+    pair = _first_pair(names, {f.field for f in sweep.fields if Axis.of(f).words}, ranks)
     failed = Counter(reason for reason in cases.failure.values.tolist() if reason)
-    page: str = _template().render(
+    page: str = template("sweep.html.j2").render(
         name=scenario.name,
         note=scenario.note,
+        cautions=CAUTIONS,
         total=cases.sizes["case"],
         failures=failed.most_common(12),
         other_failures=sum(failed.values()) - sum(n for _, n in failed.most_common(12)),
@@ -80,27 +86,14 @@ def sweep_report(scenario: Scenario, cases: xr.Dataset) -> str:
     return page
 
 
-@cache
-def _template() -> Template:
-    from jinja2 import Environment, PackageLoader, StrictUndefined
-
-    environment = Environment(
-        loader=PackageLoader("gravbasin.report"),
-        autoescape=True,
-        undefined=StrictUndefined,
-        trim_blocks=True,
-        lstrip_blocks=True,
-    )
-    return environment.get_template("sweep.html.j2")
-
-
-def _first_pair(names: list[str], ranks: dict[str, Ranking]) -> tuple[str, str] | None:
-    """The two fields that matter most to the signal-to-noise ratio, or the first two."""
+def _first_pair(names: list[str], words: set[str], ranks: dict[str, Ranking]) -> tuple[str, str] | None:
+    """The two fields that matter most to the signal-to-noise ratio, or the first two; numbers before words."""
     if len(names) < 2:
         return None
     known = ranks.get("signal_to_noise")
     order = [e.field for e in known.effects] if known and known.effects else names
-    return order[0], order[1]
+    first, second = sorted(order, key=lambda name: name in words)[:2]
+    return first, second
 
 
 def _words(cases: xr.Dataset, name: str) -> str:
