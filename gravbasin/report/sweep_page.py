@@ -29,8 +29,8 @@ Array = NDArray[np.float64]
 
 CAUTIONS = (
     "Every number is of a model under the noise of the scenario: no case was compared with a map.",
-    "Gravity alone never proves an impact, and other bodies can make the same anomaly; a case that would be seen is not "
-    "yet a case that could be told from its rivals.",
+    "Gravity alone never proves an impact, and other bodies can make the same anomaly: a case that would be seen is "
+    "not yet one that could be told from its rivals.",
     "Field safety, land access and drilling are matters for licensed practice and local rules.",
 )
 
