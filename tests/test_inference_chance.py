@@ -5,7 +5,7 @@ import pytest
 from scipy import stats
 
 from gravbasin.inference.chance import Stencil, chance_of, complete_nodes, random_ring_means
-from gravbasin.inference.evidence import Level
+from gravbasin.inference.level import Level, Roughness
 from gravbasin.inference.odds import log_odds
 from gravbasin.observed import NoiseModel, ring_means, simulate_noise
 
@@ -42,14 +42,14 @@ def test_ring_means_about_nodes_match_those_of_the_map(stencil, field):
 
 def test_covariance_matches_random_fields(stencil):
     """2,000 fields: each variance within 4 standard errors, sqrt(2/2000) of itself."""
-    level = Level(1.0, 1e6)
-    data = random_ring_means(stencil, STEP, NOISE, level, 2000, seed=3)
+    data = random_ring_means(stencil, STEP, NOISE, np.ones(2000), seed=3)
     np.testing.assert_allclose(data.var(axis=1), np.diag(stencil.covariance), rtol=4 * np.sqrt(2 / 2000))
 
 
 def test_random_fields_carry_their_local_level(stencil):
     level = Level(1.5, 6.0)
-    data = random_ring_means(stencil, STEP, NOISE, level, 1500, seed=5)
+    variance, _ = Roughness(level, level.scale, level.dof).draw(np.random.default_rng(5), 1500)
+    data = random_ring_means(stencil, STEP, NOISE, variance, seed=5)
     ratio = np.sum(stencil.likelihood.whiten(data) ** 2, axis=0) / stencil.likelihood.dof / level.scale
     assert stats.kstest(ratio, stats.f(stencil.likelihood.dof, level.dof).cdf).pvalue > 1e-3
 
@@ -73,7 +73,8 @@ def test_an_implanted_structure_beats_chance_and_bare_noise_does_not(stencil, fi
 
 def test_false_alarms_are_nominal_on_random_fields(stencil):
     """The rank p-value of noise against noise is uniform: 600 places against 600, Kolmogorov-Smirnov at 0.1 %."""
-    data = random_ring_means(stencil, STEP, NOISE, Level(), 1200, seed=8)
+    variance, _ = Roughness().draw(np.random.default_rng(8), 1200)
+    data = random_ring_means(stencil, STEP, NOISE, variance, seed=8)
     found = _odds(stencil, data)
     tried, null = found[:600], found[600:]
     p = [chance_of(t, null, centres=600, independent=600, seed=1, fields=np.zeros).p_value for t in tried]

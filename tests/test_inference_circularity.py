@@ -4,8 +4,9 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from gravbasin.inference.circularity import FINE_ORDERS, SHAPE_ORDERS, Harmonics, circularity_test
-from gravbasin.inference.evidence import Level
+from gravbasin.inference.circularity import circularity_test
+from gravbasin.inference.harmonics import FINE_ORDERS, SHAPE_ORDERS, Harmonics
+from gravbasin.inference.level import Level
 from gravbasin.labels import data_array
 from gravbasin.observed import NoiseModel, simulate_noise
 

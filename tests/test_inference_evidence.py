@@ -7,13 +7,12 @@ from scipy import stats
 from gravbasin.crater.priors import Range
 from gravbasin.inference.bank import Bank
 from gravbasin.inference.evidence import (
-    Level,
     evidence,
-    fit_level,
     log_likelihood,
     predictive_fit,
     weighted_quantile,
 )
+from gravbasin.inference.level import Level
 from gravbasin.inference.likelihood import ring_likelihood
 from gravbasin.inference.odds import log_odds
 
@@ -87,18 +86,13 @@ def test_ranks_of_the_truth_are_uniform():
     assert stats.chisquare(counts).pvalue > 1e-3
 
 
-@pytest.mark.parametrize(("scale", "dof"), [(1.0, 6.0), (1.7, 12.0), (0.6, 40.0)])
-def test_roughness_from_place_to_place_is_recovered(scale, dof):
-    """400 independent places: scale within 25 %, dof within a factor 2.5 (weakly known when large)."""
-    rng = np.random.default_rng(7)
-    misfits = scale * dof / rng.chisquare(dof, 400) * rng.chisquare(18, 400)
-    found = fit_level(misfits, 18, 400.0)
-    assert found.scale == pytest.approx(scale, rel=0.25)
-    assert dof / 2.5 < found.dof < dof * 2.5
-
-
-def test_few_places_leave_the_prior_level():
-    assert fit_level(np.full(5, 20.0), 18, 5.0) == Level()
+def test_a_level_for_each_place_is_the_level_of_that_place_alone():
+    rng = np.random.default_rng(5)
+    data, templates = rng.standard_normal((N, 4)) * 3, rng.standard_normal((N, 6))
+    scale = np.array([0.4, 1.0, 2.5, 1.7])
+    together = log_odds(FREE, templates, data, Level(scale, 9.0))
+    apart = [log_odds(FREE, templates, data[:, [i]], Level(scale[i], 9.0))[0] for i in range(4)]
+    np.testing.assert_allclose(together, apart, rtol=1e-12)
 
 
 def test_weighted_quantiles_of_equal_weights_are_plain_ones():

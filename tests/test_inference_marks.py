@@ -8,7 +8,8 @@ from gravbasin.forward.rings import ring_table
 from gravbasin.inference.bank import Bank
 from gravbasin.inference.chance import Stencil
 from gravbasin.inference.contrasts import cleaning, derivatives, equal_draws, fieller
-from gravbasin.inference.evidence import Level, evidence
+from gravbasin.inference.evidence import evidence
+from gravbasin.inference.level import Level
 from gravbasin.inference.likelihood import ring_likelihood
 from gravbasin.inference.marks import DIP, FLOOR, HIGH, RING, STRENGTH, TELLS, shape_marks
 from gravbasin.observed import NoiseModel, polynomial_basis, ring_radii

@@ -10,8 +10,9 @@ from gravbasin.crater.cells import Mesh
 from gravbasin.crater.priors import Range
 from gravbasin.forward.rings import ring_table
 from gravbasin.inference.bank import build_bank
-from gravbasin.inference.evidence import Level, evidence
+from gravbasin.inference.evidence import evidence
 from gravbasin.inference.latent import LatentStream, main_parameters
+from gravbasin.inference.level import Level
 from gravbasin.inference.likelihood import ring_likelihood
 from gravbasin.inference.refine import refined
 

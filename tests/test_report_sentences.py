@@ -61,8 +61,12 @@ def test_local_level_is_the_central_range_of_an_inverse_gamma() -> None:
 
     level = {"scale": 1.3, "dof": 12.0}
     drawn = np.sqrt(1.3 * 12.0 / np.random.default_rng(1).chisquare(12.0, 20_000))
-    told = re.search(r"between ([\d.]+) and ([\d.]+) times", sentences.local_level({"local_noise_level": level}))
+    found = {"anywhere": level, "here": level, "texture_weight": 0.0}
+    told = re.search(r"between ([\d.]+) and ([\d.]+) times", sentences.local_level({"local_noise_level": found}))
     assert [float(v) for v in told.groups()] == pytest.approx(np.quantile(drawn, [0.05, 0.95]), rel=0.06)
+    assert "texture" not in sentences.local_level({"local_noise_level": found})
+    found |= {"here": {"scale": 2.0, "dof": 30.0}, "texture_weight": 18.0}
+    assert "texture of the map about the centre" in sentences.local_level({"local_noise_level": found})
     assert sentences.local_level({}) == ""
 
 

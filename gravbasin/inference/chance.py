@@ -11,7 +11,6 @@ from numpy.typing import NDArray
 from scipy import sparse
 
 from gravbasin.discs import ring_fractions
-from gravbasin.inference.evidence import Level
 from gravbasin.inference.likelihood import RingLikelihood, ring_likelihood
 from gravbasin.inference.response import ring_response
 from gravbasin.observed import NoiseModel, polynomial_basis, ring_covariance, simulate_noise, stencil_axes
@@ -172,15 +171,15 @@ def complete_nodes(observed: xr.DataArray, shape: tuple[int, int]) -> Nodes:
 
 
 def random_ring_means(
-    stencil: Stencil, spacing: tuple[float, float], noise: NoiseModel, level: Level, count: int, seed: int
+    stencil: Stencil, spacing: tuple[float, float], noise: NoiseModel, variance: Array, seed: int
 ) -> Array:
-    """Ring means of random fields of the noise, each with its own local level, (n_ring, count), mGal."""
+    """Ring means of random fields of the noise, (n_ring, n_field) mGal, one for each variance relative to the model."""
     half_n, half_e = stencil.half
     easting, northing = spacing[1] * np.arange(-half_e, half_e + 1.0), spacing[0] * np.arange(-half_n, half_n + 1.0)
     rng = np.random.default_rng([seed, 7])
-    found = np.empty((stencil.area.size, count))
-    for start in range(0, count, 200):
-        size = min(200, count - start)
+    found = np.empty((stencil.area.size, variance.size))
+    for start in range(0, variance.size, 200):
+        size = min(200, variance.size - start)
         fields = simulate_noise(noise, easting, northing, seed=rng, n=size).values.reshape(size, -1)
         found[:, start : start + size] = stencil.weights @ fields.T
-    return found * np.sqrt(level.scale * level.dof / rng.chisquare(level.dof, count))
+    return found * np.sqrt(variance)

@@ -10,7 +10,8 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import linalg, stats
 
-from gravbasin.inference.evidence import Level, Posterior
+from gravbasin.inference.evidence import Posterior
+from gravbasin.inference.level import Level
 from gravbasin.inference.likelihood import RingLikelihood
 
 __all__ = ["CONFIDENCE", "Noise", "adapted", "cleaning", "derivatives", "equal_draws", "fieller", "ring_noise"]

@@ -10,14 +10,13 @@ from numpy.typing import NDArray
 from scipy import special
 
 from gravbasin.inference.bank import Bank
+from gravbasin.inference.level import Level
 from gravbasin.inference.likelihood import RingLikelihood
 
 __all__ = [
     "Fit",
-    "Level",
     "Posterior",
     "evidence",
-    "fit_level",
     "log_likelihood",
     "log_likelihood_of_models",
     "predictive_fit",
@@ -25,22 +24,6 @@ __all__ = [
 ]
 
 Array = NDArray[np.float64]
-
-
-@dataclasses.dataclass(frozen=True)
-class Level:
-    """How rough the crust is from place to place: the noise variance relative to the model, as an inverse gamma.
-
-    Attributes
-    ----------
-    scale : float
-        Typical variance relative to the noise model; 1 where the model holds on average.
-    dof : float
-        Degrees of freedom: small where roughness differs much from place to place.
-    """
-
-    scale: float = 1.0
-    dof: float = 10.0
 
 
 def log_likelihood(likelihood: RingLikelihood, templates: Array, data: Array, level: Level) -> Array:
@@ -55,7 +38,7 @@ def log_likelihood(likelihood: RingLikelihood, templates: Array, data: Array, le
     data : (n_ring, n_place) array, mGal
         Ring means about places.
     level : Level
-        Prior of the noise level: the density is a multivariate Student's t.
+        Prior of the noise level, one for all or one a place: the density is a multivariate Student's t.
 
     Returns
     -------
@@ -75,49 +58,14 @@ def _chi2(white_models: Array, white_data: Array) -> Array:
 
 def _student(chi2: Array, likelihood: RingLikelihood, level: Level) -> Array:
     n, nu = likelihood.dof, level.dof
-    base = nu * level.scale
+    base = nu * np.reshape(level.scale, (-1, 1))
     constant = special.gammaln(0.5 * (nu + n)) - special.gammaln(0.5 * nu) - 0.5 * n * np.log(np.pi)
-    constant += 0.5 * nu * np.log(base) - likelihood.log_determinant
+    constant = constant + 0.5 * nu * np.log(base) - likelihood.log_determinant
     chi2 += base
     np.log(chi2, out=chi2)
     chi2 *= -0.5 * (nu + n)
     chi2 += constant
     return chi2
-
-
-def fit_level(misfits: Array, dof: int, independent: float) -> Level:
-    """Roughness from place to place, from the noise-only chi-square at many places of the map.
-
-    Parameters
-    ----------
-    misfits : (n_place,) array
-        Chi-square of the ring means under noise alone.
-    dof : int
-        Its degrees of freedom.
-    independent : float
-        How many of the places are independent (they overlap).
-
-    Returns
-    -------
-    Level
-        Posterior mode under ln(scale) ~ N(0, 0.5) and ln(dof) ~ N(ln 10, 1): chi²/dof over scale is F(dof, level.dof)
-        where the variance is an inverse gamma.
-    """
-    if misfits.size < 10 or independent < 2.0:
-        return Level()
-    from scipy import optimize, stats
-
-    ratio = np.asarray(misfits) / dof
-    weight = min(independent, misfits.size) / misfits.size
-
-    def objective(theta: Array) -> float:
-        scale, nu = np.exp(theta)
-        fit = np.sum(stats.f.logpdf(ratio / scale, dof, nu) - theta[0]) * weight
-        return float(-fit + 0.5 * (theta[0] / 0.5) ** 2 + 0.5 * (theta[1] - np.log(10.0)) ** 2)
-
-    best = optimize.minimize(objective, [0.0, np.log(10.0)], method="Nelder-Mead", options={"xatol": 1e-3})
-    scale, nu = np.exp(best.x)
-    return Level(float(scale), float(np.clip(nu, 3.0, 200.0)))
 
 
 @dataclasses.dataclass(frozen=True, eq=False)

@@ -13,7 +13,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from gravbasin.inference.contrasts import CONFIDENCE, fieller
-from gravbasin.inference.evidence import Level, Posterior
+from gravbasin.inference.evidence import Posterior
+from gravbasin.inference.level import Level
 from gravbasin.inference.likelihood import RingLikelihood
 from gravbasin.inference.shape import DRAWS, SEEN, ShapeProfile
 from gravbasin.observed import RingMeans

@@ -6,7 +6,8 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import special
 
-from gravbasin.inference.evidence import Level, log_likelihood
+from gravbasin.inference.evidence import log_likelihood
+from gravbasin.inference.level import Level
 from gravbasin.inference.likelihood import RingLikelihood
 
 __all__ = ["log_odds"]
@@ -29,7 +30,7 @@ def log_odds(likelihood: RingLikelihood, templates: Array, data: Array, level: L
     data : (n_ring, n_place) array, mGal
         Ring means about the places.
     level : Level
-        Prior of the local noise level.
+        Prior of the local noise level, one for all places or one for each.
 
     Returns
     -------
@@ -41,11 +42,13 @@ def log_odds(likelihood: RingLikelihood, templates: Array, data: Array, level: L
     """
     result = np.empty(data.shape[1])
     nothing = np.zeros((templates.shape[0], 1))
+    scale = np.broadcast_to(np.asarray(level.scale, dtype=float), data.shape[1])
     step = max(1, BLOCK // templates.shape[1])
     for start in range(0, data.shape[1], step):
         block = data[:, start : start + step]
-        logs = log_likelihood(likelihood, templates, block, level)
-        alone = log_likelihood(likelihood, nothing, block, level)[:, 0]
+        here = Level(scale[start : start + step], level.dof)
+        logs = log_likelihood(likelihood, templates, block, here)
+        alone = log_likelihood(likelihood, nothing, block, here)[:, 0]
         result[start : start + step] = _log_mean_exp(logs) - alone
     return result
 

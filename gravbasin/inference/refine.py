@@ -10,7 +10,8 @@ from numpy.typing import NDArray
 from scipy import linalg, optimize, special
 
 from gravbasin.inference.bank import Bank, Family, bank_of
-from gravbasin.inference.evidence import Level, Posterior, log_likelihood_of_models
+from gravbasin.inference.evidence import Posterior, log_likelihood_of_models
+from gravbasin.inference.level import Level
 from gravbasin.inference.likelihood import RingLikelihood
 
 __all__ = ["ENOUGH", "refined"]

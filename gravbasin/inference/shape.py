@@ -10,7 +10,8 @@ from numpy.typing import NDArray
 from scipy import special
 
 from gravbasin.inference.contrasts import Noise, adapted, cleaning, derivatives, equal_draws, ring_noise
-from gravbasin.inference.evidence import Level, Posterior
+from gravbasin.inference.evidence import Posterior
+from gravbasin.inference.level import Level
 from gravbasin.inference.likelihood import RingLikelihood
 from gravbasin.observed import RingMeans
 

@@ -144,14 +144,24 @@ def noise_check(verdict: Verdict) -> str:
 
 
 def local_level(verdict: Verdict) -> str:
-    """How the noise level differs from place to place: the variance is an inverse gamma about the model's."""
+    """How the noise level differs from place to place, and here: the variance is an inverse gamma about the model's."""
     level = verdict.get("local_noise_level")
     if level is None:
         return ""
+    told = (
+        f"Crust is rougher in one place than in another: the standard deviation is taken to lie "
+        f"{_between(level['anywhere'])} times the model's at nine places in ten. "
+    )
+    if level["here"] != level["anywhere"]:
+        told += (
+            f"The texture of the map about the centre (azimuthal harmonics of orders 3 to 6, worth "
+            f"{number(level['texture_weight'], 2)} degrees of freedom by the map's own record) puts it here "
+            f"{_between(level['here'])} times. "
+        )
+    return told + "Evidence and chance are averaged over that."
+
+
+def _between(level: dict[str, float]) -> str:
     tail = stats.chi2.ppf([0.95, 0.05], level["dof"])
     low, high = (level["dof"] * level["scale"] / tail) ** 0.5
-    return (
-        f"Crust is rougher in one place than in another: the standard deviation is taken to lie between "
-        f"{number(low, 2)} and {number(high, 2)} times the model's at nine places in ten, and evidence and chance "
-        "are averaged over that."
-    )
+    return f"between {number(low, 2)} and {number(high, 2)}"

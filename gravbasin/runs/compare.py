@@ -13,7 +13,8 @@ from gravbasin.errors import InputError
 from gravbasin.inference.chance import Chance, Stencil
 from gravbasin.inference.circularity import Circularity
 from gravbasin.inference.detect import Detectability, detectability, signal_band
-from gravbasin.inference.evidence import Fit, Level, Posterior, predictive_fit
+from gravbasin.inference.evidence import Fit, Posterior, predictive_fit
+from gravbasin.inference.level import Level
 from gravbasin.inference.likelihood import RingLikelihood, ring_likelihood, shape_scatter
 from gravbasin.inference.marks import Mark, shape_marks
 from gravbasin.inference.response import ring_response

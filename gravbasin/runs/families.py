@@ -10,7 +10,8 @@ from numpy.typing import NDArray
 
 from gravbasin.crater.rivals import rivals_of
 from gravbasin.inference.bank import Bank, Family, ImpactFamily, build_bank
-from gravbasin.inference.evidence import Level, Posterior, evidence
+from gravbasin.inference.evidence import Posterior, evidence
+from gravbasin.inference.level import Level
 from gravbasin.inference.likelihood import RingLikelihood
 from gravbasin.inference.refine import refined
 from gravbasin.scenario import Scenario

@@ -11,8 +11,9 @@ from numpy.typing import NDArray
 from gravbasin import labels
 from gravbasin.inference.bank import Bank
 from gravbasin.inference.chance import Chance, Stencil, chance_of, complete_nodes, random_ring_means
-from gravbasin.inference.circularity import Circularity, Harmonics, circularity_test
-from gravbasin.inference.evidence import Level, fit_level
+from gravbasin.inference.circularity import Circularity, circularity_test
+from gravbasin.inference.harmonics import Harmonics, texture_map
+from gravbasin.inference.level import Level, Roughness, fit_roughness
 from gravbasin.inference.likelihood import RingLikelihood
 from gravbasin.inference.odds import log_odds
 from gravbasin.observed import NoiseModel, RingMeans
@@ -35,8 +36,12 @@ class Places:
         Rings about a node.
     templates : (n_ring, n_model) array, mGal
         Ring means of the impact bank through the stencil.
-    level : Level
+    roughness : Roughness
         How the noise level varies from place to place.
+    texture : (n_northing, n_easting) array
+        Power of azimuthal harmonics about every node, NaN where rings leave the map or meet gaps.
+    level : Level
+        The noise level at the structure, as far as the texture there tells.
     chance : Chance or None
         How often other places do as well as the structure.
     circularity : Circularity or None
@@ -47,14 +52,20 @@ class Places:
 
     stencil: Stencil
     templates: Array
+    roughness: Roughness
+    texture: Array
     level: Level
     chance: Chance | None
     circularity: Circularity | None
     odds: xr.DataArray
 
-    def log_odds(self, data: Array) -> Array:
-        """The statistic for ring means about nodes, (n_ring, n_place) mGal."""
-        return log_odds(self.stencil.likelihood, self.templates, data, self.level)
+    def log_odds(self, data: Array, level: Level) -> Array:
+        """The statistic for ring means, (n_ring, n_place) mGal, about places of this noise level."""
+        return log_odds(self.stencil.likelihood, self.templates, data, level)
+
+    def level_at(self, rows: NDArray[np.intp], columns: NDArray[np.intp]) -> Level:
+        """The noise level at nodes with complete rings."""
+        return self.roughness.at(self.texture[rows, columns])
 
 
 def places_of(
@@ -103,10 +114,19 @@ def places_of(
     elsewhere = np.hypot(east[columns] - rings.centre[0], north[rows] - rings.centre[1]) > diameter
     independent = float(elsewhere.sum() * rings.spacing_m[0] * rings.spacing_m[1] / (np.pi * diameter**2))
     misfits = np.sum(stencil.likelihood.whiten(data[:, elsewhere]) ** 2, axis=0)
-    level = fit_level(misfits, stencil.likelihood.dof, independent)
+    node = (int(np.argmin(np.abs(north - rings.centre[1]))), int(np.argmin(np.abs(east - rings.centre[0]))))
+    texture = np.full(observed.shape, np.nan)
+    texture[rows, columns] = texture_map(observed.values, rings.edges_m, rings.spacing_m, noise, resolution=resolution)[
+        rows, columns
+    ]
+    there = texture[rows, columns]
+    roughness = fit_roughness(misfits, stencil.likelihood.dof, there[elsewhere], independent)
+    level = roughness.at_one(float(texture[node]))
     templates = stencil.response @ bank.profiles.T
-    found = log_odds(stencil.likelihood, templates, data, level)
-    places = Places(stencil, templates, level, None, None, _odds_map(observed, rows, columns, found))
+    found = log_odds(stencil.likelihood, templates, data, roughness.at(there))
+    places = Places(
+        stencil, templates, roughness, texture, level, None, None, _odds_map(observed, rows, columns, found)
+    )
     here = log_odds(likelihood, response @ bank.profiles.T, rings.mean[:, None], level)
     chance = None
     if centres:
@@ -116,16 +136,20 @@ def places_of(
             centres=centres,
             independent=independent,
             seed=seed,
-            fields=lambda n: places.log_odds(random_ring_means(stencil, rings.spacing_m, noise, level, n, seed)),
+            fields=lambda n: _on_random_fields(places, rings.spacing_m, noise, n, seed),
         )
     picked = np.random.default_rng([seed, 3]).choice(
         np.flatnonzero(elsewhere), min(ROUNDNESS_PLACES, int(elsewhere.sum())), replace=False
     )
-    node = (int(np.argmin(np.abs(north - rings.centre[1]))), int(np.argmin(np.abs(east - rings.centre[0]))))
     harmonics = Harmonics.build(rings.edges_m, rings.spacing_m, noise, resolution=resolution)
     others = (rows[picked], columns[picked])
-    circularity = circularity_test(observed, harmonics, node, others, level=level, profile=profile)
+    circularity = circularity_test(observed, harmonics, node, others, level=roughness.anywhere, profile=profile)
     return dataclasses.replace(places, chance=chance, circularity=circularity)
+
+
+def _on_random_fields(places: Places, spacing: tuple[float, float], noise: NoiseModel, count: int, seed: int) -> Array:
+    variance, level = places.roughness.draw(np.random.default_rng([seed, 13]), count)
+    return places.log_odds(random_ring_means(places.stencil, spacing, noise, variance, seed), level)
 
 
 def _odds_map(observed: xr.DataArray, rows: NDArray[np.intp], columns: NDArray[np.intp], found: Array) -> xr.DataArray:

@@ -60,7 +60,8 @@ def search_map(
         i = int(np.argmax(np.where(free, values, -np.inf)))
         if values[i] <= 0.0:
             break
-        here = few.log_odds(places.stencil.ring_means(observed.values, rows[[i]], columns[[i]]))[0]
+        node = rows[[i]], columns[[i]]
+        here = few.log_odds(places.stencil.ring_means(observed.values, *node), places.level_at(*node))[0]
         p = (1 + int(np.sum(best >= here))) / (1 + best.size)
         found.append(Candidate(float(east[i]), float(north[i]), float(values[i]), float(p)))
         free &= np.hypot(east - east[i], north - north[i]) > diameter
@@ -92,10 +93,10 @@ def _largest_by_map(
     Levels are drawn apart for overlapping places, which makes the largest value larger: the charge errs on the safe
     side.
     """
-    rng, level = np.random.default_rng([seed, 8]), few.level
+    rng = np.random.default_rng([seed, 8])
     largest = np.empty(FIELDS)
     for i in range(FIELDS):
         field = simulate_noise(noise, observed.easting.values, observed.northing.values, seed=rng).values
-        roughness = np.sqrt(level.scale * level.dof / rng.chisquare(level.dof, nodes[0].size))
-        largest[i] = few.log_odds(few.stencil.ring_means(field, *nodes) * roughness).max()
+        variance, level = few.roughness.draw(rng, nodes[0].size)
+        largest[i] = few.log_odds(few.stencil.ring_means(field, *nodes) * np.sqrt(variance), level).max()
     return largest

@@ -105,7 +105,11 @@ def _map_results(scenario: Scenario, comparison: Comparison) -> dict[str, Any]:
         },
         "rivals": _rival_table(scenario, comparison),
         "marks": [dataclasses.asdict(mark) for mark in comparison.marks],
-        "local_noise_level": dataclasses.asdict(comparison.level),
+        "local_noise_level": {
+            "anywhere": dataclasses.asdict(comparison.places.roughness.anywhere),
+            "here": dataclasses.asdict(comparison.level),
+            "texture_weight": comparison.places.roughness.weight,
+        },
     }
     chance, circularity = comparison.chance, comparison.circularity
     if chance is not None:

@@ -13,7 +13,7 @@ import numpy as np
 
 import gravbasin as gb
 from gravbasin import labels
-from gravbasin.inference.evidence import Level
+from gravbasin.inference.level import Level
 from gravbasin.inference.likelihood import ring_likelihood
 from gravbasin.inference.odds import log_odds
 from gravbasin.observed import NoiseModel

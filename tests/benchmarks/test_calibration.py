@@ -10,7 +10,9 @@ from scipy import stats
 
 from gravbasin.inference.bank import ImpactFamily, build_bank
 from gravbasin.inference.chance import Stencil, chance_of, complete_nodes
-from gravbasin.inference.evidence import Level, evidence, fit_level
+from gravbasin.inference.evidence import evidence
+from gravbasin.inference.harmonics import texture_map
+from gravbasin.inference.level import Level, fit_roughness
 from gravbasin.inference.likelihood import ring_likelihood
 from gravbasin.inference.odds import log_odds
 from gravbasin.inference.refine import ENOUGH, refined
@@ -87,7 +89,9 @@ def _false_alarms(bank, fields, nominal):
         rows, columns = complete_nodes(field, stencil.shape)
         data = stencil.ring_means(field.values, rows, columns)
         misfits = np.sum(stencil.likelihood.whiten(data) ** 2, axis=0)
-        level = fit_level(misfits, stencil.likelihood.dof, rows.size * STEP**2 / (np.pi * 45e3**2))
+        texture = texture_map(field.values, EDGES, (STEP, STEP), NOISE)[rows, columns]
+        independent = rows.size * STEP**2 / (np.pi * 45e3**2)
+        level = fit_roughness(misfits, stencil.likelihood.dof, texture, independent).at(texture)
         templates = stencil.response @ bank.profiles[:2000].T
         odds = log_odds(stencil.likelihood, templates, data, level)
         for i in rng.choice(rows.size, 20, replace=False):
