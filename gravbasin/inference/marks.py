@@ -202,7 +202,7 @@ def _mark(
     return Mark(
         name=name,
         unit=UNITS[name],
-        meaning=_meaning(name, value, limits, expected),
+        meaning=_meaning(name, limits, expected),
         value=value,
         standard_error=float(error),
         low=float(limits[0]),
@@ -226,18 +226,17 @@ def _central(values: Array) -> Range | None:
     return float(median), float(low), float(high)
 
 
-def _meaning(name: str, value: float, limits: tuple[float, float], expected: dict[str, Range | None]) -> str:
-    """The sentence: what the mark tells, what was found, which families agree (their 90 % ranges overlap)."""
+def _meaning(name: str, limits: tuple[float, float], expected: dict[str, Range | None]) -> str:
+    """The sentence: what the mark tells, and which families agree with it (their 90 % ranges overlap)."""
     known = {family: span for family, span in expected.items() if span is not None}
     agree = [family for family, (_, low, high) in known.items() if low <= limits[1] and high >= limits[0]]
     against = [family for family in known if family not in agree]
-    unit = "" if UNITS[name] == "1" else f" {UNITS[name]}"
-    found = f"{TELLS[name]}; found {value:.2g}{unit} ({limits[0]:.2g} to {limits[1]:.2g})"
+    tells = TELLS[name]
     if not against:
-        return f"{found}, as expected of {' and of '.join(agree)}" if agree else found
+        return f"{tells}; as expected of {' and of '.join(agree)}" if agree else tells
     if agree:
-        return f"{found}, as expected of {agree[0]} but not of {against[0]}"
-    return f"{found}, not as expected of {' nor of '.join(against)}"
+        return f"{tells}; as expected of {agree[0]} but not of {against[0]}"
+    return f"{tells}; not as expected of {' nor of '.join(against)}"
 
 
 def _wall_dip(profile: ShapeProfile) -> Mark:
