@@ -28,7 +28,7 @@ from gravbasin.runs import sweep_cost
 from gravbasin.runs.sweep import sweep
 from gravbasin.scenario import Scenario
 sweep_cost._measured = lambda plan: (0.003, 0.0)   # not under test here, and the same every time
-sweep_cost.BATCH_SECONDS = 0.1                     # one tile at a time: as many places to be killed at as there can be
+sweep_cost.BATCH_SECONDS = (0.1, 0.1)   # one tile at a time: as many places to be killed at as can be
 """
 
 
@@ -143,7 +143,7 @@ def test_killed_at_every_step_of_finishing_it_ends_as_if_never_broken(tmp_path, 
 
 def test_a_dask_worker_killed_in_mid_run_changes_nothing(tmp_path, unbroken, monkeypatch):
     pytest.importorskip("distributed")
-    monkeypatch.setattr("gravbasin.runs.sweep_cost.BATCH_SECONDS", 0.1)
+    monkeypatch.setattr("gravbasin.runs.sweep_cost.BATCH_SECONDS", (0.1, 0.1))
     made = DaskExecutor(None, 2)
     monkeypatch.setattr("gravbasin.runs.sweep.executor_of", lambda name, workers: made)
     killed = []
@@ -159,7 +159,7 @@ def test_a_dask_worker_killed_in_mid_run_changes_nothing(tmp_path, unbroken, mon
 
 
 def test_interrupted_by_hand_it_goes_on_where_it_was(tmp_path, unbroken, monkeypatch):
-    monkeypatch.setattr("gravbasin.runs.sweep_cost.BATCH_SECONDS", 0.1)
+    monkeypatch.setattr("gravbasin.runs.sweep_cost.BATCH_SECONDS", (0.1, 0.1))
     seen = []
 
     def stop_once(text, done, cases):
@@ -271,7 +271,7 @@ def test_a_disk_too_small_is_told_before_any_case(tmp_path):
 
 @pytest.mark.parametrize("file", ["journal.jsonl", "records.f64"])
 def test_a_disk_that_fills_up_in_mid_run_loses_nothing(tmp_path, unbroken, monkeypatch, file):
-    monkeypatch.setattr("gravbasin.runs.sweep_cost.BATCH_SECONDS", 0.1)
+    monkeypatch.setattr("gravbasin.runs.sweep_cost.BATCH_SECONDS", (0.1, 0.1))
     write, count = CaseStore._write, 0
 
     def full(self, name, data, offset):
@@ -295,7 +295,7 @@ def test_a_folder_that_cannot_be_written_is_one_line():
 
 
 def test_rows_that_changed_on_disk_are_made_again(tmp_path, unbroken, monkeypatch):
-    monkeypatch.setattr("gravbasin.runs.sweep_cost.BATCH_SECONDS", 0.1)
+    monkeypatch.setattr("gravbasin.runs.sweep_cost.BATCH_SECONDS", (0.1, 0.1))
 
     def stop(text, done, cases):
         if done >= 128:

@@ -23,8 +23,14 @@ GIB = 2.0**30
 LIMITS = {"seconds": 7200.0, "disk": 20 * GIB, "memory": 4 * GIB}
 """Above any of these a sweep starts only when told to: two hours, 20 GiB on disk, 4 GiB of memory."""
 
-BATCH_SECONDS = 1.5
-"""Aim for a batch: long against the milliseconds a scheduler spends on one, short against what a lost worker costs."""
+BATCH_SECONDS = (1.5, 5.0)
+"""Least and most for a batch: long against what a scheduler spends on one, short against what a lost worker costs."""
+
+SCHEDULER_SECONDS = 0.008
+"""What a batch costs dask's scheduler and our end of it, measured with batches of no work (see DEVELOPERS.md)."""
+
+SCHEDULER_SHARE = 0.5
+"""Part of their time these two may be busy; above it workers begin to wait for them."""
 
 BATCH_BYTES = 64 * 2**20
 
@@ -82,7 +88,7 @@ def cost_of(plan: Plan, executor: Executor) -> Cost:
     with one_thread():
         per_case, slow = _measured(plan)
     start = max(time.perf_counter() - begun - slow, 0.0)
-    tiles = round(BATCH_SECONDS / per_case / maker.tile)
+    tiles = round(_batch_seconds(executor.workers) / per_case / maker.tile)
     fair = math.ceil(size / (4 * executor.workers) / maker.tile)
     fits = BATCH_BYTES // (8 * maker.width * maker.tile)
     batch = max(1, min(tiles, fair, fits)) * maker.tile
@@ -91,6 +97,18 @@ def cost_of(plan: Plan, executor: Executor) -> Cost:
     table = 20 * (len(maker.axes) + len(maker.scalars))
     disk = size * (2 * 8 * maker.width + table)
     return Cost(size, executor.workers, per_case, start, batch, float(processes * peak), float(disk))
+
+
+def _batch_seconds(workers: int) -> float:
+    """Seconds a batch should take, so that the scheduler keeps up with the workers.
+
+    Examples
+    --------
+    >>> [round(_batch_seconds(n), 3) for n in (1, 200, 1000)]
+    [1.5, 3.2, 5.0]
+    """
+    least, most = BATCH_SECONDS
+    return min(max(least, workers * SCHEDULER_SECONDS / SCHEDULER_SHARE), most)
 
 
 def _measured(plan: Plan) -> tuple[float, float]:
@@ -143,7 +161,7 @@ def duration(seconds: float) -> str:
     Examples
     --------
     >>> duration(0.4), duration(75), duration(7300), duration(3e5)
-    ('0.4 s', '75 s', '2 h 2 min', '3.5 days')
+    ('0.4 s', '75 s', '2 h 1 min', '3.5 days')
     """
     if not math.isfinite(seconds):
         return "unknown time"
