@@ -13,6 +13,7 @@ import gravbasin as gb
 from gravbasin.crater import PARTS
 from gravbasin.errors import InputError
 from gravbasin.report.erosion_figure import erosion_figure, slices_shown
+from gravbasin.report.samples_figure import samples_figure
 from gravbasin.report.section_page import section_report, slice_rows
 from gravbasin.runs.section_run import SectionDescription, describe_section
 
@@ -174,3 +175,68 @@ def test_command_prints_sizes_and_slices(monkeypatch, capsys, tmp_path) -> None:
     with pytest.raises(SystemExit):
         main()
     assert capsys.readouterr().out == ""
+
+
+# Laboratory samples
+
+SAMPLES = """name,density_kg_m3,porosity,easting_km,northing_km,quartz_percent,plagioclase_percent
+A,2660,0.01,-30,0,40,60
+B,2650,0.02,-15,1,40,60
+C,2600,0.04,-6,0,40,60
+D,2640,,5,-1,40,60
+E,2980,0.01,14,0,40,60
+F,2665,0.01,29,1,40,60
+G,2655,0.01,,,40,60
+"""
+
+
+@pytest.fixture
+def sampled(tmp_path) -> SectionDescription:
+    (tmp_path / "samples.csv").write_text(SAMPLES, encoding="utf-8")
+    asked = gb.Scenario(
+        crater={"rim_diameter_km": 40.0},
+        history={"erosion_km": 2.4},
+        samples={"path": tmp_path / "samples.csv"},
+        model=COARSE,
+    )
+    return describe_section(asked, tmp_path / "out")
+
+
+def test_samples_narrow_the_structure_and_stand_in_folder_and_page(sampled, tmp_path) -> None:
+    compared, update = sampled.samples
+    assert update.outliers == 1
+    facts = json.loads((tmp_path / "out" / "section.json").read_text())
+    assert facts["samples"]["density"] == update.density
+    with xr.open_dataset(tmp_path / "out" / "samples.nc", engine="h5netcdf") as kept:
+        np.testing.assert_array_equal(kept.density, compared.density)
+    page = (tmp_path / "out" / "report.html").read_text()
+    assert "Laboratory samples" in page
+    assert "set aside as outliers" in page
+    assert (tmp_path / "out" / "figures" / "samples.svg").exists()
+
+
+def test_the_figure_of_samples_shows_each_where_it_lies(sampled) -> None:
+    compared, update = sampled.samples
+    density, porosity = samples_figure(compared, update, sampled.section).axes
+    lines = {line.get_label(): line for line in density.get_lines()}
+    used = compared.outlier.values == 0
+    np.testing.assert_array_equal(lines["measured"].get_ydata(), compared.density.values[used])
+    np.testing.assert_array_equal(lines["measured, set aside"].get_ydata(), [2980.0])
+    places = lines["measured"].get_xdata()
+    np.testing.assert_allclose(places[:-1], compared.transect.values[used][:-1] / 1e3)
+    assert places[-1] > np.nanmax(compared.transect.values) / 1e3  # no position: after the end, and told
+    assert "no position" in porosity.get_xlabel()
+    np.testing.assert_array_equal(porosity.get_lines()[0].get_ydata(), 100 * compared.porosity.values)
+
+
+def test_samples_without_positions_or_porosity_are_drawn_in_their_order(sampled) -> None:
+    compared, update = sampled.samples
+    bare = compared.assign(transect=compared.transect * np.nan, porosity=compared.porosity * np.nan)
+    (density,) = samples_figure(bare, update, sampled.section).axes
+    assert "order of the table" in density.get_xlabel()
+
+
+def test_a_section_without_samples_has_no_such_chapter(fresh) -> None:
+    page, figures = section_report(fresh)
+    assert "Laboratory samples" not in page
+    assert "samples" not in figures

@@ -13,12 +13,14 @@ from gravbasin.report.erosion_figure import erosion_figure, slices_shown
 from gravbasin.report.figures import TITLES, Drawing
 from gravbasin.report.html import XML, provenance_rows, template
 from gravbasin.report.profile_figures import parts_figure
+from gravbasin.report.samples_figure import samples_figure
 from gravbasin.report.section_figure import section_figure
 from gravbasin.report.tables import Row, dimension_rows
 from gravbasin.report.words import given, number, signed
 from gravbasin.scenario import Scenario
 
 if TYPE_CHECKING:
+    from gravbasin.crater.samples import SampleUpdate
     from gravbasin.runs.section_run import SectionDescription
 
 __all__ = ["SliceRow", "section_lines", "section_report", "slice_rows"]
@@ -29,6 +31,7 @@ LEAST_POROSITY = 0.001
 """Porosity below which there is nothing to draw."""
 
 EROSION = "What erosion takes"
+SAMPLES = "Laboratory samples"
 
 
 def section_report(described: SectionDescription) -> tuple[str, dict[str, str]]:
@@ -46,18 +49,21 @@ def section_report(described: SectionDescription) -> tuple[str, dict[str, str]]:
     figures : dict of str
         Each figure as a file's text (SVG) by name.
     """
-    drawings = {drawing.name: drawing for drawing in (_section(described), _parts(described), _erosion(described))}
+    drawn = [_section(described), _parts(described), _erosion(described)]
+    drawn += [_samples(*described.samples, described.section)] if described.samples else []
+    drawings = {drawing.name: drawing for drawing in drawn}
     dimensions = described.model.dimensions
     page = template("section.html.j2").render(
         name=described.scenario.name,
         note=described.scenario.note,
         numbers=_numbers(described),
         remarks=_remarks(described.scenario),
-        titles=TITLES | {"erosion": EROSION},
+        titles=TITLES | {"erosion": EROSION, "samples": SAMPLES},
         drawings=drawings,
         missing={},
         slices=slice_rows(described),
         pace=_pace(described.erosion),
+        samples=_said(described.samples[1]) if described.samples else [],
         dimensions=dimension_rows(dimensions),
         target=dimensions.target_rock,
         provenance=provenance_rows(described.as_dict()["provenance"]),
@@ -113,6 +119,31 @@ def _erosion(described: SectionDescription) -> Drawing:
         description=f"Rock, share of the anomaly and anomaly left, against erosion. {first}",
     )
     return Drawing("erosion", EROSION, caption, text)
+
+
+def _samples(compared: xr.Dataset, update: SampleUpdate, section: xr.Dataset) -> Drawing:
+    caption = (
+        "Each sample where it lies along the line of best fit through all: measured, and the range its minerals allow "
+        "with the pores it has. Band and dashed line: density of unfractured target at today's ground, by these "
+        "samples and before them. Crosses lie so far from what was expected of them that they were set aside."
+    )
+    words = f"{update.used} samples used, {update.outliers} set aside, {update.in_fill} on crater fill."
+    text = svg(samples_figure(compared, update, section), name="samples", title=SAMPLES, description=words)
+    return Drawing("samples", SAMPLES, caption, text)
+
+
+def _said(update: SampleUpdate) -> list[Row]:
+    density = f"{number(update.density, 4)} ± {number(update.density_sd, 2)} kg/m³"
+    low, high = (update.porosity * np.exp(sign * 1.645 * update.porosity_scatter) for sign in (-1, 1))
+    return [
+        Row("target at today's ground", density, f"unfractured; {number(update.prior_density, 4)} before the samples"),
+        Row(
+            "fracture porosity at the floor", number(update.porosity, 2), f"90 %: {number(low, 2)} to {number(high, 2)}"
+        ),
+        Row("samples used", f"{update.used}", "of target rock, measured, not set aside"),
+        Row("set aside as outliers", f"{update.outliers}", "look at them: another rock, an error, or a dyke"),
+        Row("on crater fill", f"{update.in_fill}", "say nothing of the target"),
+    ]
 
 
 def _rim_radius(described: SectionDescription) -> float:

@@ -25,6 +25,7 @@ from gravbasin.crater import (
     section_parts,
     with_samples,
 )
+from gravbasin.crater.samples import SampleUpdate
 from gravbasin.forward.rings import RingTable, ring_table
 from gravbasin.runs.forward_run import SPHERE_MATTERS_MGAL, profile_radii
 from gravbasin.runs.store import replaced_folder
@@ -68,6 +69,8 @@ class SectionDescription:
         "flat" or "sphere": what the rings were computed on.
     flat_earth_error : float, mGal
         Largest difference between the two.
+    samples : (Dataset, SampleUpdate) or None
+        Laboratory samples against what was expected of them, and what they said of the structure.
     """
 
     scenario: Scenario
@@ -78,6 +81,7 @@ class SectionDescription:
     erosion: xr.Dataset
     earth: Literal["flat", "sphere"]
     flat_earth_error: float
+    samples: tuple[xr.Dataset, SampleUpdate] | None = None
 
     @property
     def dimensions(self) -> list[dict[str, Any]]:
@@ -105,6 +109,7 @@ class SectionDescription:
                 "flat_earth_error_mgal": self.flat_earth_error,
             },
             "erosion": _slices(self.erosion),
+            **({"samples": dataclasses.asdict(self.samples[1])} if self.samples else {}),
             "provenance": {
                 "scenario_sha256": scenario_hash(self.scenario),
                 "versions": labels.versions("numpy", "scipy", "xarray"),
@@ -122,8 +127,8 @@ def describe_section(
     scenario : Scenario
         From `load_scenario`; an observed map is not looked at.
     out_dir : path, optional
-        Folder to write: section.json, section.nc, parts.nc, profile.nc, erosion.nc, report.html, figures, and the
-        scenario as resolved. It is replaced as a whole, or left as it was.
+        Folder to write: section.json, section.nc, parts.nc, profile.nc, erosion.nc, report.html, figures, the scenario
+        as resolved, and samples.nc where there are some. It is replaced as a whole, or left as it was.
     progress : callable, optional
         Called with (stage, number, count) as the work goes on.
 
@@ -150,8 +155,10 @@ def describe_section(
             progress(name, STAGES.index(name), len(STAGES))
 
     stage("building the section")
+    samples = None
     if scenario.samples is not None:
-        scenario = with_samples(scenario)[0]
+        scenario, compared, update = with_samples(scenario)
+        samples = compared, update
     model = crater_model(scenario)
     mesh = default_mesh(model, layers=scenario.model.layers, rings=scenario.model.rings)
     section, parts = density_section(scenario, mesh=mesh), section_parts(scenario, mesh=mesh)
@@ -163,7 +170,7 @@ def describe_section(
     profile = _profile(table, parts)
     stage("eroding it")
     erosion = _eroded(scenario, radius[::2])
-    described = SectionDescription(scenario, model, section, parts, profile, erosion, earth, error)
+    described = SectionDescription(scenario, model, section, parts, profile, erosion, earth, error, samples)
     if out_dir is not None:
         stage("writing")
         _write(described, Path(out_dir))
@@ -288,6 +295,8 @@ def _write(described: SectionDescription, folder: Path) -> None:
     with replaced_folder(folder, mark=MARK) as fresh:
         for name in ("section", "parts", "profile", "erosion"):
             getattr(described, name).to_netcdf(fresh / f"{name}.nc", engine="h5netcdf")
+        if described.samples:
+            described.samples[0].to_netcdf(fresh / "samples.nc", engine="h5netcdf")
         (fresh / "scenario.toml").write_text(scenario_toml(described.scenario), encoding="utf-8")
         report, figures = section_report(described)
         (fresh / "figures").mkdir()
