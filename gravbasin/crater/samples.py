@@ -177,13 +177,13 @@ def _expected(table: pd.DataFrame, porosity: Array) -> tuple[Array, Array]:
 
 
 def _score(density: Array, expected: Array) -> Array:
-    """Distance from the median in units of the scaled median deviation, at least 10 kg/m³ to spare tight sets."""
+    """Distance from the median in scaled median deviations, 20 kg/m³ at least to spare tight sets (common practice)."""
     centre = np.nanmedian(density) if np.isfinite(density).any() else np.nan
     difference = density - np.where(np.isfinite(expected), expected, centre)
     if not np.isfinite(difference).any():
         return difference
     middle = np.nanmedian(difference)
-    return (difference - middle) / max(1.4826 * float(np.nanmedian(np.abs(difference - middle))), 10.0)
+    return (difference - middle) / max(1.4826 * float(np.nanmedian(np.abs(difference - middle))), 20.0)
 
 
 def _along(position: Array) -> Array:
