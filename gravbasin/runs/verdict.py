@@ -206,7 +206,18 @@ def _by_chance(comparison: Comparison) -> str:
     if chance is None:
         return ""
     places = "other places on the map" if chance.source == "map" else "random fields"
-    return f"; {100 * chance.p_value:.2g} ± {100 * chance.standard_error:.1g} % of {places} do as well"
+    return f"; {_percent(chance.p_value, 2)} ± {_percent(chance.standard_error, 1)} % of {places} do as well"
+
+
+def _percent(share: float, digits: int) -> str:
+    """A share in per cent, to so many digits and never with a power of ten.
+
+    Examples
+    --------
+    >>> _percent(0.17, 1), _percent(0.0009, 2), _percent(1.0, 2), _percent(0.4955, 2)
+    ('20', '0.09', '100', '50')
+    """
+    return f"{float(f'{100 * share:.{digits}g}'):g}"
 
 
 def _mgal(value: float) -> str:
