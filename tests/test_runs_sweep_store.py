@@ -5,11 +5,13 @@ import signal
 import subprocess
 import sys
 import textwrap
+from types import SimpleNamespace
 
 import pytest
 import xarray as xr
 
 from gravbasin.errors import CannotFinish, InputError
+from gravbasin.runs import sweep_cost
 from gravbasin.runs.case_store import CaseStore
 from gravbasin.runs.executors import DaskExecutor
 from gravbasin.runs.sweep import sweep
@@ -269,6 +271,36 @@ def test_a_disk_too_small_is_told_before_any_case(tmp_path):
     assert sweep(question(32), tmp_path).sizes["case"] == 32
 
 
+def test_a_sweep_above_the_limits_needs_a_yes_and_takes_no_room_without(tmp_path, monkeypatch):
+    monkeypatch.setitem(sweep_cost.LIMITS, "seconds", 0.0)
+    with pytest.raises(InputError, match="add --yes"):
+        sweep(question(), tmp_path)
+    assert not (tmp_path / "records.f64").exists()
+    assert sweep(question(32), tmp_path, yes=True).sizes["case"] == 32  # the folder is free for another
+
+
+def test_a_sweep_larger_than_the_disk_is_refused_and_takes_no_room(tmp_path, monkeypatch):
+    monkeypatch.setattr("gravbasin.runs.sweep_cost.shutil.disk_usage", lambda folder: SimpleNamespace(free=9))
+    with pytest.raises(CannotFinish, match="make room"):
+        sweep(question(), tmp_path)
+    assert not (tmp_path / "records.f64").exists()
+
+
+def test_room_taken_in_vain_is_given_back(tmp_path, unbroken, monkeypatch):
+    """A disk that turns out too small while room is taken keeps none of it."""
+
+    def half(descriptor, start, size):
+        os.ftruncate(descriptor, size // 2)
+        raise OSError(28, "No space left on device")
+
+    with monkeypatch.context() as patch:
+        patch.setattr(os, "posix_fallocate", half)
+        with pytest.raises(CannotFinish, match="No space left on device"):
+            sweep(question(), tmp_path)
+    assert (tmp_path / "records.f64").stat().st_size == 0
+    xr.testing.assert_identical(sweep(question(), tmp_path), unbroken)
+
+
 @pytest.mark.parametrize("file", ["journal.jsonl", "records.f64"])
 def test_a_disk_that_fills_up_in_mid_run_loses_nothing(tmp_path, unbroken, monkeypatch, file):
     monkeypatch.setattr("gravbasin.runs.sweep_cost.BATCH_SECONDS", (0.1, 0.1))
@@ -324,13 +356,6 @@ def test_failed_cases_keep_their_reason_and_the_rest_goes_on(tmp_path):
     assert cases["history.erosion_km"].values.tolist() == [0.5, 0.5, 40.0, 40.0, 1.0, 1.0]
     assert "2 of them failed" in (tmp_path / "sweep.log").read_text()
     assert "must leave some crust" in (tmp_path / "report.html").read_text()
-
-
-def test_sweeps_above_the_limits_need_a_yes(tmp_path, monkeypatch):
-    monkeypatch.setitem(__import__("gravbasin.runs.sweep_cost", fromlist=["LIMITS"]).LIMITS, "seconds", 1e-3)
-    with pytest.raises(InputError, match="add --yes"):
-        sweep(question(32), tmp_path)
-    assert sweep(question(32), tmp_path, yes=True).sizes["case"] == 32
 
 
 def test_missing_runs_are_found_whatever_the_batch(tmp_path):

@@ -66,7 +66,7 @@ class CaseStore:
                 if self.complete:
                     self.clear()
                 else:
-                    self._open_records()
+                    self._journal_end = self._read_journal()
         except BaseException:
             os.close(self._lock)
             raise
@@ -188,23 +188,35 @@ class CaseStore:
         journal = self.folder / JOURNAL
         return (self.folder / CASES).exists() or (journal.exists() and journal.stat().st_size > 0)
 
-    def _open_records(self) -> None:
-        size = 8 * self.width * self.cases
-        descriptor = os.open(self.folder / RECORDS, os.O_RDWR | os.O_CREAT, 0o644)
-        try:
-            # All the room there will be need of, now: a disk too small is told before any work is done.
-            if hasattr(os, "posix_fallocate"):
-                os.posix_fallocate(descriptor, 0, size)
-            else:
-                os.ftruncate(descriptor, size)
-        finally:
-            os.close(descriptor)
-        self._journal_end = self._read_journal()
+    @property
+    def reserved(self) -> int:
+        """Bytes of disk that the rows have already."""
+        records = self.folder / RECORDS
+        return records.stat().st_size if records.exists() else 0
+
+    def reserve(self) -> None:
+        """Take all the room that rows will need, so that a disk too small is told before any work is done."""
+        size, before = 8 * self.width * self.cases, self.reserved
+        with self._told():
+            descriptor = os.open(self.folder / RECORDS, os.O_RDWR | os.O_CREAT, 0o644)
+            try:
+                if hasattr(os, "posix_fallocate"):
+                    os.posix_fallocate(descriptor, 0, size)
+                else:
+                    os.ftruncate(descriptor, size)
+            except BaseException:
+                os.ftruncate(descriptor, before)  # a disk filled for nothing is given back
+                raise
+            finally:
+                os.close(descriptor)
 
     def _read_journal(self) -> int:
         """Count what the journal vouches for and the records still hold; returns where its last whole line ends."""
         path, end = self.folder / JOURNAL, 0
         if not path.exists():
+            return 0
+        if not self.reserved:
+            path.unlink()
             return 0
         with open(path, "rb") as journal, open(self.folder / RECORDS, "rb") as records:
             for line in journal:

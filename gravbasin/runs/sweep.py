@@ -109,6 +109,7 @@ def _fill(plan: Plan, store: CaseStore, executor: str, workers: int | None, yes:
             tell("measuring a sample", store.count, store.cases)
             cost = cost_of(plan, made)
             refuse_above(cost, store, yes)
+            store.reserve()
             with store.told():
                 log.write(f"{executor}: {store.count} of {store.cases} cases done before; " + "; ".join(cost.lines()))
             _run(plan, store, made, cost, tell, log)

@@ -147,7 +147,7 @@ def refuse_above(cost: Cost, store: CaseStore, yes: bool) -> None:
             f"{LIMITS['disk'] / GIB:g} GiB",
             "add --yes to go on all the same, or make fewer cases",
         )
-    free = shutil.disk_usage(store.folder).free + (8 * cost.cases * store.width)  # the rows have their room already
+    free = shutil.disk_usage(store.folder).free + store.reserved
     if cost.disk > free:
         raise CannotFinish(
             f"output folder {store.folder}: needs {cost.disk / GIB:.2g} GiB of {free / GIB:.2g} GiB free; "
