@@ -158,6 +158,13 @@ def test_a_centre_off_the_map_is_told_in_one_line(place):
         gb.assess(_scenario(place, place / "map.nc", **{"observed.centre_easting_km": 9000.0}))
 
 
+def test_a_map_that_is_not_there_is_told_by_the_scenarios_own_field(place):
+    with pytest.raises(gb.InputError, match=r"^observed\.path = .*nowhere\.nc: is not a file; check the path$"):
+        gb.assess(_scenario(place, place / "nowhere.nc"))
+    with pytest.raises(gb.InputError, match=r"^map\.nc: observed\.variable = free_air: must be a grid in the file"):
+        gb.assess(_scenario(place, place / "map.nc", **{"observed.variable": "free_air"}))
+
+
 def test_odds_for_a_body_nobody_weighs_are_refused(place):
     with pytest.raises(gb.InputError, match="granite plutom"):
         gb.assess(_scenario(place, place / "map.nc", **{"prior.odds": {"granite plutom": 2.0}}))

@@ -17,10 +17,10 @@ from gravbasin.crater.rivals import rivals_of
 from gravbasin.crater.samples import with_samples
 from gravbasin.errors import InputError
 from gravbasin.inference.detect import Detectability
-from gravbasin.observed import read_grid
 from gravbasin.runs.compare import Comparison, compare_with_map, detect_without_map, noise_of
 from gravbasin.runs.families import NOISE_ALONE
 from gravbasin.runs.forward_run import Modelled, model_anomaly
+from gravbasin.runs.scenario_map import scenario_map
 from gravbasin.runs.search import Candidate, candidate_table, search_map
 from gravbasin.runs.store import write_run
 from gravbasin.runs.verdict import verdict_of
@@ -123,7 +123,7 @@ def _answer(scenario: Scenario, search: bool, stage: Callable[[str], None]) -> A
     if scenario.samples is not None:
         scenario = with_samples(scenario)[0]
     stage("reading the map")
-    observed = _read(scenario)
+    observed = scenario_map(scenario)
     stage("building the section and its anomaly")
     modelled = model_anomaly(scenario, farthest=_farthest(scenario, observed))
     stage("estimating the noise")
@@ -143,24 +143,6 @@ def _answer(scenario: Scenario, search: bool, stage: Callable[[str], None]) -> A
     if search:
         verdict["search"] = candidate_table(candidates).to_dict("records")
     return Assessment(scenario, modelled, seen, comparison, tuple(candidates), verdict, _profile(modelled, comparison))
-
-
-def _read(scenario: Scenario) -> xr.DataArray | None:
-    given = scenario.observed
-    if given is None:
-        return None
-    observed = read_grid(given.path, variable=given.variable, nan=given.nan, units=given.units)
-    for axis, centre_km in (("easting", given.centre_easting_km), ("northing", given.centre_northing_km)):
-        low, high = observed[axis].values[[0, -1]] / 1e3
-        if not low <= centre_km <= high:
-            raise InputError(
-                f"observed.centre_{axis}_km",
-                centre_km,
-                f"must lie on the map, {low:g} to {high:g} km",
-                "give the centre of the circle in the map's own coordinates, in kilometres",
-                given.path.name,
-            )
-    return observed
 
 
 def _check_odds(scenario: Scenario) -> None:

@@ -14,8 +14,9 @@ from threadpoolctl import threadpool_limits
 
 from gravbasin import labels
 from gravbasin.errors import InputError
-from gravbasin.observed import NoiseModel, read_grid
+from gravbasin.observed import NoiseModel
 from gravbasin.runs.compare import noise_of
+from gravbasin.runs.scenario_map import scenario_map
 from gravbasin.runs.store import replaced_folder
 from gravbasin.scenario import Scenario, Survey
 from gravbasin.scenario_file import scenario_hash, scenario_toml
@@ -172,7 +173,7 @@ def plan(scenario: Scenario, out_dir: str | Path | None = None, *, progress: Pro
 
 def _planned(scenario: Scenario, survey: Survey, stage: Callable[[str], None]) -> Planned:
     stage("reading the map and the survey's files")
-    observed = _observed(scenario)
+    observed = scenario_map(scenario, centred=False)
     site = site_of(scenario, survey, observed.attrs.get("crs_wkt") if observed is not None else None)
     if survey.geopackage and site.crs is None:
         raise InputError(
@@ -184,13 +185,6 @@ def _planned(scenario: Scenario, survey: Survey, stage: Callable[[str], None]) -
     noise = noise_of(scenario, observed)
     prepared = prepare(scenario, survey, site, noise, progress=stage)
     return _judged(scenario, survey, prepared, noise, spacings, stage)
-
-
-def _observed(scenario: Scenario) -> xr.DataArray | None:
-    given = scenario.observed
-    if given is None:
-        return None
-    return read_grid(given.path, variable=given.variable, nan=given.nan, units=given.units)
 
 
 def _check_room(survey: Survey, site: Any, spacings: Array) -> None:

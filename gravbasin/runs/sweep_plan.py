@@ -9,13 +9,14 @@ from pathlib import Path
 from gravbasin import labels
 from gravbasin.crater import with_samples
 from gravbasin.errors import InputError
-from gravbasin.observed import NoiseModel, read_grid
+from gravbasin.observed import NoiseModel
 from gravbasin.runs.case_bench import Recipe
 from gravbasin.runs.case_store import CaseStore
 from gravbasin.runs.cases import CaseMaker
 from gravbasin.runs.compare import noise_of
 from gravbasin.runs.executors import Task, maker_of, one_thread
 from gravbasin.runs.sampling import Design
+from gravbasin.runs.scenario_map import scenario_map
 from gravbasin.runs.variants import Variants
 from gravbasin.scenario import Scenario
 from gravbasin.scenario_file import ScenarioError
@@ -115,11 +116,10 @@ def _ends(design: Design, field: str, given: float) -> tuple[float, float]:
 
 def _of_map(scenario: Scenario, design: Design) -> tuple[NoiseModel | None, float | None, str | None]:
     """Noise and step of the scenario's map, estimated once for all cases; a stated noise is each case's own."""
-    given = scenario.observed
-    if given is None:
+    observed = scenario_map(scenario, centred=False)
+    if observed is None:
         noise_of(scenario, None)  # says what is missing
         return None, None, None
-    observed = read_grid(given.path, variable=given.variable, nan=given.nan, units=given.units)
     step = float(max(observed.easting[1] - observed.easting[0], observed.northing[1] - observed.northing[0]))
     swept = [axis.field for axis in design.axes if axis.field.startswith("noise.")]
     stated = scenario.noise.stated
