@@ -180,3 +180,20 @@ def test_prior_odds_shift_probabilities_but_not_evidence(place, seen):
     ratio = granite["probability"] / shifted[0]["probability"]
     before = base["granite pluton"]["probability"] / base["eroded impact structure"]["probability"]
     assert ratio == pytest.approx(50 * before, rel=1e-6)
+
+
+def test_a_deformed_structure_lies_on_the_map_as_it_was_bent(place):
+    """A sector without contrast from north to east leaves less there, the rest as it was; the page tells."""
+    plain = gb.assess(_scenario(place, place / "map.nc")).comparison.maps.modelled
+    cut = {"deformation.missing_from_degrees": 0.0, "deformation.missing_to_degrees": 90.0}
+    result = gb.assess(_scenario(place, place / "map.nc", **cut), place / "cut")
+    bent = result.comparison.maps.modelled
+    assert plain.dims == bent.dims
+    assert not np.isnan(bent).any()
+    offset = 8e3
+    north_east, south_west = (
+        {"easting": CENTRE[0] + sign * offset, "northing": CENTRE[1] + sign * offset} for sign in (1, -1)
+    )
+    assert abs(float(bent.sel(north_east))) < 0.6 * abs(float(plain.sel(north_east)))
+    assert float(bent.sel(south_west)) == pytest.approx(float(plain.sel(south_west)), rel=0.15)
+    assert "drawn for fit, rivals and chance are round" in (place / "cut" / "report.html").read_text()

@@ -6,6 +6,7 @@ from functools import cache
 from typing import TYPE_CHECKING, Any
 
 from gravbasin.crater import rivals_of
+from gravbasin.forward.motion import is_axisymmetric
 from gravbasin.inference.bank import ImpactFamily
 from gravbasin.report import sentences
 from gravbasin.report.figures import TITLES, assessment_figures
@@ -52,6 +53,7 @@ def assessment_report(result: Assessment) -> tuple[str, dict[str, str]]:
         note=scenario.note,
         verdict=verdict,
         meaning=sentences.meaning(scenario, verdict),
+        deformed=not is_axisymmetric(scenario.deformation),
         numbers=key_numbers(verdict),
         rivals=rival_rows(verdict, rivals_of(scenario)) if compared else [],
         identifiability=sentences.identifiability(verdict, ImpactFamily(scenario).ranges) if compared else "",

@@ -10,6 +10,7 @@ import xarray as xr
 from numpy.typing import NDArray
 
 from gravbasin.errors import InputError
+from gravbasin.forward.motion import is_axisymmetric
 from gravbasin.inference.chance import Chance, Stencil
 from gravbasin.inference.circularity import Circularity
 from gravbasin.inference.detect import Detectability, detectability, signal_band
@@ -221,7 +222,7 @@ def compare_with_map(
         marks=marks,
         places=places,
         vanishing=vanishing_erosion(scenario, ring_sight(response, covariances, regional), modelled.radius),
-        maps=_maps(observed, noise, modelled, np.hypot(easting, northing[:, None]), exclude),
+        maps=_maps(observed, noise, _on_map(scenario, modelled, observed), exclude),
     )
 
 
@@ -316,11 +317,18 @@ def _regional_basis(observed: xr.DataArray, centre: tuple[float, float], noise: 
     return polynomial_basis(east, north, noise.regional_order, centre=centre, scale=scale)
 
 
-def _maps(
-    observed: xr.DataArray, noise: NoiseModel, modelled: Modelled, distance: Array, exclude: tuple[float, float, float]
-) -> xr.Dataset:
+def _on_map(scenario: Scenario, modelled: Modelled, observed: xr.DataArray) -> Array:
+    """The scenario's structure on the map's nodes, mGal: its profile turned about the centre, or its deformed grid."""
+    if not is_axisymmetric(scenario.deformation):
+        nodes = {"northing": observed.northing.values, "easting": observed.easting.values}
+        return np.asarray(modelled.grid.interp(nodes, kwargs={"fill_value": 0.0}).values)
+    east, north = _centre(scenario)
+    distance = np.hypot(observed.easting.values - east, observed.northing.values[:, None] - north)
+    return np.interp(distance, modelled.radius, modelled.profile, right=0.0)
+
+
+def _maps(observed: xr.DataArray, noise: NoiseModel, on_map: Array, exclude: tuple[float, float, float]) -> xr.Dataset:
     regional = fit_regional(observed, noise, exclude=exclude)
-    on_map = np.interp(distance.ravel(), modelled.radius, modelled.profile, right=0.0).reshape(distance.shape)
     model_map = observed.copy(data=on_map)
     model_map.attrs = {"units": "mGal", "long_name": "modelled anomaly on the map's nodes"}
     return xr.Dataset(
