@@ -11,14 +11,12 @@ from numpy.typing import NDArray
 
 from gravbasin.crater import CraterModel, contrast, crater_model, density_section
 from gravbasin.crater.history import Ground
-from gravbasin.forward.deformation import azimuthal_mean
 from gravbasin.forward.layers import grid_anomaly, layered_prisms
 from gravbasin.forward.motion import is_axisymmetric
-from gravbasin.forward.rings import ring_anomaly
 from gravbasin.inference.detect import detectability, required_snr
 from gravbasin.inference.likelihood import shape_scatter
 from gravbasin.runs.case_bench import Bench, Recipe, Survey
-from gravbasin.runs.deformed_run import _reaching_up
+from gravbasin.runs.deformed_run import deformed_map, deformed_profiles
 from gravbasin.runs.sampling import Design
 from gravbasin.runs.variants import Variants
 from gravbasin.scenario import Scenario
@@ -201,8 +199,7 @@ class CaseMaker:
     def _row(self, case: _Case, profiles: Array, mass: float, vanishing: float) -> Array:
         deformed = not is_axisymmetric(case.scenario.deformation)
         if deformed:
-            # Scatter of the structure and its deformation are taken as independent, as in an assessment.
-            profiles = profiles + (self._deformed_profile(case) - profiles[0])
+            profiles = self._deformed_profiles(case)
         peak, half_width = peak_of(self.bench.radius, profiles[0])
         seen = self._seen(case, profiles)
         values = [peak, profiles[0, 0], half_width / KM, mass, *seen, vanishing / KM]
@@ -262,21 +259,22 @@ class CaseMaker:
         levels = np.append(cuts, 2 * cuts[-1] - cuts[-2])
         return float(last_crossing(levels, np.append(snr, 0.0)[:, None], needed)[0])
 
-    def _deformed_profile(self, case: _Case) -> Array:
-        model, deformation = case.models[0], case.scenario.deformation
+    def _deformed_profiles(self, case: _Case) -> Array:
+        """One by one, each on its own cells, as the round ones are."""
         height = case.scenario.model.station_height_m
-        section = _reaching_up(case.scenario, model, self.bench.cells(model, height).mesh)
-        mean = azimuthal_mean(section, deformation)
-        return np.asarray(ring_anomaly(mean, self.bench.radius, height_m=height, earth="sphere").values)
+        meshes = [self.bench.cells(model, height).mesh for model in case.models]
+        profiles = [
+            deformed_profiles(case.scenario, [model], mesh, self.bench.radius, "sphere")[0]
+            for model, mesh in zip(case.models, meshes, strict=True)
+        ]
+        return np.array(profiles)
 
     def _grid(self, case: _Case) -> Array:
-        model, deformation = case.models[0], case.scenario.deformation
-        height, axis = case.scenario.model.station_height_m, self.grid_axis
-        mesh = self.bench.cells(model, height).mesh
-        if is_axisymmetric(deformation):
-            prisms = layered_prisms(density_section(model, mesh=mesh), axis, axis)
-        else:
-            prisms = layered_prisms(_reaching_up(case.scenario, model, mesh), axis, axis, deformation=deformation)
+        model, height = case.models[0], case.scenario.model.station_height_m
+        mesh, axis = self.bench.cells(model, height).mesh, self.grid_axis
+        if not is_axisymmetric(case.scenario.deformation):
+            return deformed_map(case.scenario, model, mesh, axis).values
+        prisms = layered_prisms(density_section(model, mesh=mesh), axis, axis)
         return np.asarray(grid_anomaly(prisms, height_m=height).values)
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+from collections.abc import Sequence
 from typing import Literal
 
 import numpy as np
@@ -14,62 +15,78 @@ from gravbasin.crater import CraterModel, Mesh, density_section
 from gravbasin.forward.deformation import azimuthal_mean
 from gravbasin.forward.layers import grid_anomaly, layered_prisms
 from gravbasin.forward.motion import rock_above_m
-from gravbasin.forward.rings import ring_anomaly
+from gravbasin.forward.rings import ring_table
 from gravbasin.scenario import Scenario
 
-__all__ = ["deformed_anomaly"]
+__all__ = ["deformed_grid", "deformed_map", "deformed_profiles"]
 
 Array = NDArray[np.float64]
 
 
-def deformed_anomaly(
-    scenario: Scenario,
-    model: CraterModel,
-    mesh: Mesh,
-    grid: xr.DataArray,
-    radius: Array,
-    earth: Literal["flat", "sphere"],
-) -> tuple[Array, xr.DataArray]:
-    """Mean anomaly over circles at `radius` (m), and the anomaly on a grid as fine as the undeformed one, mGal.
+def deformed_grid(scenario: Scenario, model: CraterModel, mesh: Mesh, step: float) -> xr.DataArray:
+    """Anomaly of the deformed structure on a grid of this step (m) about its centre, mGal."""
+    (section,) = _reaching_up(scenario, [model], mesh)
+    reach = float(azimuthal_mean(section, scenario.deformation).radius_edges[-1])
+    half = int(np.ceil(reach / step)) + 2
+    axis = step * np.arange(-half, half + 1.0)
+    return deformed_map(scenario, model, mesh, axis)
+
+
+def deformed_map(scenario: Scenario, model: CraterModel, mesh: Mesh, axis: Array) -> xr.DataArray:
+    """The same on the nodes of an axis, m, easting and northing alike."""
+    (section,) = _reaching_up(scenario, [model], mesh)
+    prisms = layered_prisms(section, axis, axis, deformation=scenario.deformation)
+    return grid_anomaly(prisms, height_m=scenario.model.station_height_m)
+
+
+def deformed_profiles(
+    scenario: Scenario, models: Sequence[CraterModel], mesh: Mesh, radius: Array, earth: Literal["flat", "sphere"]
+) -> Array:
+    """Mean anomaly over circles of deformed structures, (n_model, n_radius), mGal.
 
     Parameters
     ----------
     scenario : Scenario
         With its deformation.
-    model, mesh
-        The undeformed structure and the cells of its section.
-    grid : DataArray (northing, easting)
-        The undeformed anomaly: sets the step.
+    models : sequence of CraterModel
+        The structures before it.
+    mesh : Mesh
+        Cells that hold them all.
     radius : (n_radius,) array, m
         Where the mean is wanted.
     earth : str
-        "flat" or "sphere", as for the undeformed profile.
+        "flat" or "sphere".
     """
-    section = _reaching_up(scenario, model, mesh)
-    mean = azimuthal_mean(section, scenario.deformation)
-    height = scenario.model.station_height_m
-    profile = ring_anomaly(mean, radius, height_m=height, earth=earth).values
-    step = float(grid.easting[1] - grid.easting[0])
-    half = int(np.ceil(float(mean.radius_edges[-1]) / step)) + 2
-    axis = step * np.arange(-half, half + 1.0)
-    prisms = layered_prisms(section, axis, axis, deformation=scenario.deformation)
-    return profile, grid_anomaly(prisms, height_m=height)
+    sections = _reaching_up(scenario, models, mesh)
+    widest = max(range(len(models)), key=lambda i: models[i].outer_radius)
+    rings = azimuthal_mean(sections[widest], scenario.deformation).radius_edges.values
+    means = [azimuthal_mean(section, scenario.deformation, radius_edges=rings) for section in sections]
+    # Where contrast sank deeper there are more layers below the common ones.
+    layers = max((mean.depth_edges.values for mean in means), key=len)
+    contrasts = np.zeros((len(means), layers.size - 1, rings.size - 1))
+    for contrast, mean in zip(contrasts, means, strict=True):
+        contrast[: mean.sizes["depth"]] = mean.density_contrast.values
+    table = ring_table(radius, rings, layers, height_m=scenario.model.station_height_m, earth=earth)
+    return np.asarray(table.anomaly(contrasts))
 
 
-def _reaching_up(scenario: Scenario, model: CraterModel, mesh: Mesh) -> xr.Dataset:
-    """The section with the rock above today's ground that the deformation brings down; a cover has none to bring."""
-    section = density_section(model, mesh=mesh)
-    ground = model.ground
-    missing = min(rock_above_m(section, scenario.deformation), ground.erosion)
-    if missing <= 0.0 or ground.cover > 0.0:
-        return section
-    # The same structure less eroded, on a mesh with layers added on top, then moved back up.
+def _reaching_up(scenario: Scenario, models: Sequence[CraterModel], mesh: Mesh) -> list[xr.Dataset]:
+    """Sections with the rock above today's ground that the deformation brings down; a cover has none to bring."""
+    sections = [density_section(model, mesh=mesh) for model in models]
+    highest = max(rock_above_m(section, scenario.deformation) for section in sections)
+    missing = min(highest, *(model.ground.erosion for model in models))
+    if missing <= 0.0 or any(model.ground.cover > 0.0 for model in models):
+        return sections
+    # The same structures less eroded, on a mesh with layers added on top, then moved back up.
     thickness = max(missing / 20, float(mesh.depth_edges[1]))
     above = np.linspace(0.0, missing, int(np.ceil(missing / thickness)) + 1)
     edges = np.concatenate([above[:-1], missing + mesh.depth_edges])
-    less = dataclasses.replace(model, ground=dataclasses.replace(ground, erosion=ground.erosion - missing))
-    taller = density_section(less, mesh=Mesh(edges, mesh.radius_edges))
-    return taller.assign_coords(
-        depth=labels.coordinate("depth", taller.depth.values - missing),
-        depth_edges=labels.coordinate("depth_edges", edges - missing),
-    )
+    taller = Mesh(edges, mesh.radius_edges)
+    depths = labels.coordinate("depth_edges", edges - missing)
+    found = []
+    for model in models:
+        ground = dataclasses.replace(model.ground, erosion=model.ground.erosion - missing)
+        section = density_section(dataclasses.replace(model, ground=ground), mesh=taller)
+        depth = labels.coordinate("depth", section.depth.values - missing)
+        found.append(section.assign_coords({"depth": depth, "depth_edges": depths}))
+    return found

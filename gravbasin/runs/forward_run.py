@@ -17,12 +17,13 @@ from gravbasin.crater import (
     crater_model,
     default_mesh,
     density_section,
+    shared_mesh,
 )
 from gravbasin.forward.audit import Audit, audit_anomaly
 from gravbasin.forward.layers import grid_anomaly, layered_prisms
 from gravbasin.forward.motion import is_axisymmetric
 from gravbasin.forward.rings import RingTable, ring_table
-from gravbasin.runs.deformed_run import deformed_anomaly
+from gravbasin.runs.deformed_run import deformed_grid, deformed_profiles
 from gravbasin.scenario import Scenario
 from gravbasin.scenario_file import scenario_hash
 
@@ -33,6 +34,9 @@ KM = 1000.0
 
 SPHERE_MATTERS_MGAL = 0.02
 """Flat-Earth error above which the spherical rings take over: the accuracy asked of the whole engine."""
+
+DRAWN_CELLS = (40, 80)
+"""Layers and rings on which draws of a deformed structure are bent, one by one."""
 
 
 @dataclasses.dataclass(frozen=True, eq=False)
@@ -131,10 +135,11 @@ def model_anomaly(scenario: Scenario, *, farthest: float = 0.0) -> Modelled:
     profile = parts.sum(axis=0)
     scattered = _forward_draws(draws, mesh, table)
     if not is_axisymmetric(scenario.deformation):
-        # Scatter of the structure and its deformation are taken as independent: draws move by the same difference.
-        deformed, grid = deformed_anomaly(scenario, model, mesh, grid, radius, earth)
-        grid = _placed(scenario, grid)
-        scattered, profile = scattered + (deformed - profile), deformed
+        grid = _placed(scenario, deformed_grid(scenario, model, mesh, float(grid.easting[1] - grid.easting[0])))
+        profile = deformed_profiles(scenario, [model], mesh, radius, earth)[0]
+        if draws:
+            coarse = shared_mesh(draws, layers=DRAWN_CELLS[0], rings=DRAWN_CELLS[1])
+            scattered = deformed_profiles(scenario, draws, coarse, radius, earth)
     facts = labels.provenance(
         scenario=scenario_hash(scenario),
         versions=labels.versions("harmonica", "numpy", "scipy"),
