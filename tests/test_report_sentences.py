@@ -83,3 +83,26 @@ def test_local_level_is_the_central_range_of_an_inverse_gamma() -> None:
 def test_every_verdict_has_its_meaning(word) -> None:
     scenario = gb.Scenario(crater={"rim_diameter_km": 30.0})
     assert len(sentences.meaning(scenario, {"verdict": word})) > 60
+
+
+def test_spectrum_grain_and_mask_are_told_by_their_thresholds() -> None:
+    spectrum = {
+        "wavelength_km": [100.0, 50.0],
+        "ratio": [1.1, 2.4],
+        "p_value": 0.5,
+        "grain_p_value": 0.4,
+        "grain_ratio": 2.0,
+        "grain_azimuth_deg": 31.0,
+    }
+    rough = {"structure_left_out": 4.0, "structure_fitted": 4.4}
+    verdict = {"noise_check": {"spectrum": spectrum, "roughness_mgal": rough}}
+    assert "no grain" in sentences.noise_spectrum(verdict)
+    assert "differ" not in sentences.noise_mask(verdict)
+    spectrum |= {"p_value": 0.01, "grain_p_value": 0.01}
+    rough["structure_fitted"] = 5.0
+    assert "near 50 km the map has 2.4 times as much" in sentences.noise_spectrum(verdict)
+    assert "smoothest along azimuth 31°" in sentences.noise_spectrum(verdict)
+    assert "rougher than the rest" in sentences.noise_mask(verdict)
+    assert sentences.noise_spectrum({}) == ""
+    assert sentences.noise_mask({}) == ""
+    assert sentences.noise_spectrum({"noise_check": {"spectrum": None}}) == ""

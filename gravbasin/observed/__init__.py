@@ -15,12 +15,15 @@ from gravbasin.observed.quality import NoiseCheck, check_noise
 from gravbasin.observed.readers import read_grid
 from gravbasin.observed.regional import fit_regional, polynomial_basis
 from gravbasin.observed.simulate import simulate_noise
+from gravbasin.observed.spectrum import SpectrumCheck, check_spectrum
 
 __all__ = [
     "NoiseCheck",
     "NoiseModel",
     "RingMeans",
+    "SpectrumCheck",
     "check_noise",
+    "check_spectrum",
     "estimate_noise",
     "fit_regional",
     "polynomial_basis",

@@ -76,6 +76,7 @@ def estimate_noise(
     observed: xr.DataArray,
     *,
     exclude: Disc | None = None,
+    template: xr.DataArray | None = None,
     regional_order: int = 1,
     resolution_m: float | None = None,
     max_points: int = 700,
@@ -89,6 +90,9 @@ def estimate_noise(
         The map; NaN where there are no data.
     exclude : (easting, northing, radius), m, optional
         Disc left out: the structure, which is not noise. About 1.5 times the anomaly's radius.
+    template : DataArray (northing, easting), mGal, optional
+        A structure on the nodes of the map, some multiple of which is estimated with the noise: instead of leaving it
+        out, for an anomaly that is what it was modelled to be.
     regional_order : int
         0, 1 or 2: order of the polynomial estimated with the noise.
     resolution_m : float, optional
@@ -135,7 +139,7 @@ def estimate_noise(
     rng = np.random.default_rng(seed)
     nodes = thin(lattice, lattice.valid(exclude, where=where), separation_m=resolution, max_points=max_points, rng=rng)
     _check_nodes(nodes, exclude, resolution, where)
-    problem = _problem(nodes, regional_order, resolution)
+    problem = _problem(nodes, regional_order, resolution, template)
     return _model(problem, _sample(problem, rng), regional_order, resolution, rng)
 
 
@@ -147,10 +151,15 @@ def _check_nodes(nodes: Nodes, exclude: Disc | None, resolution: float, where: s
         raise InputError("observed", nodes.values[0], "must vary", "check that the file holds the anomaly", where)
 
 
-def _problem(nodes: Nodes, regional_order: int, resolution: float) -> _Problem:
+def _problem(nodes: Nodes, regional_order: int, resolution: float, template: xr.DataArray | None) -> _Problem:
     lags = Lags.between(nodes)
     bounds = np.log([(resolution, 4.0 * lags.distance.max()), SMOOTHNESS_BOUNDS, _NUGGET_BOUNDS])
     design = polynomial_basis(nodes.easting, nodes.northing, regional_order)
+    if template is not None:
+        places = {"northing": xr.DataArray(nodes.northing), "easting": xr.DataArray(nodes.easting)}
+        column = template.sel(places).values
+        if np.any(column):
+            design = np.column_stack([design, column / np.abs(column).max()])
     return _Problem(lags, design, nodes.values, bounds)
 
 

@@ -119,6 +119,14 @@ class NoiseModel:
         """Correlation of the correlated part at the distances, any shape, dimensionless."""
         return matern_correlation(distance_m, range_m=self.range_m, smoothness=self.smoothness)
 
+    def roughness(self, distance_m: float) -> float:
+        """Standard deviation of the difference between places this far apart, over the square root of 2, mGal.
+
+        Range and sill trade against each other in an estimate; this is what both say of structures of that size.
+        """
+        correlated = self.sill_mgal**2 * (1.0 - float(self.correlation(distance_m)))
+        return math.sqrt(correlated + self.nugget_mgal**2)
+
     def covariance(self, distance_m: ArrayLike) -> Array:
         """Covariance of the correlated part at the distances, any shape, mGal²; the nugget is not in it."""
         return self.sill_mgal**2 * self.correlation(distance_m)

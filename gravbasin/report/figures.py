@@ -11,6 +11,7 @@ from gravbasin.forward.motion import is_axisymmetric
 from gravbasin.inference.bank import ImpactFamily
 from gravbasin.report.canvas import svg
 from gravbasin.report.map_figure import map_figure
+from gravbasin.report.noise_figure import spectrum_figure
 from gravbasin.report.odds_figures import chance_figure, detectability_figure
 from gravbasin.report.odds_map_figure import odds_figure
 from gravbasin.report.posterior_figure import FEW, posterior_figure
@@ -21,6 +22,7 @@ from gravbasin.report.words import given, number, percent, plus_minus, probabili
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
+    from gravbasin.observed import SpectrumCheck
     from gravbasin.runs.assess import Assessment
     from gravbasin.runs.compare import Comparison
 
@@ -37,6 +39,7 @@ TITLES = {
     "detectability": "Could it be seen?",
     "chance": "How often by chance?",
     "odds": "Odds over the map",
+    "spectrum": "Spectrum of the map",
 }
 """Every figure an assessment can have, in the order of the page."""
 
@@ -70,6 +73,9 @@ def assessment_figures(result: Assessment) -> dict[str, Drawing]:
             drawings.append(_chance(result.comparison))
         if result.comparison.odds.notnull().any():
             drawings.append(_odds(result, result.comparison))
+        trial = result.comparison.noise_trial
+        if trial is not None and trial.spectrum is not None:
+            drawings.append(_spectrum(result.comparison, trial.spectrum))
     return {drawing.name: drawing for drawing in drawings}
 
 
@@ -187,6 +193,18 @@ def _parts(result: Assessment) -> Drawing:
         "The modelled anomaly split by cause; the causes add up to the heavy line. A cause without any contrast left "
         f"today (worn away, or never there) has no line.{bent}",
         f"Modelled anomaly by cause, against distance. At the centre: {listed}.",
+    )
+
+
+def _spectrum(comparison: Comparison, spectrum: SpectrumCheck) -> Drawing:
+    ratio = spectrum.ratio
+    return _drawing(
+        spectrum_figure(spectrum, signal_km=comparison.detectability.band_km),
+        "spectrum",
+        "Power of the map over that of its noise model, by wavelength. The band holds 90 % of maps simulated from the "
+        "model, gaps, mask and regional treated alike. Heavy bar at the foot: the wavelengths that carry the signal; "
+        "there the points matter most.",
+        f"Power over the model's against wavelength, from {number(min(ratio), 2)} to {number(max(ratio), 2)}.",
     )
 
 

@@ -68,6 +68,8 @@ def assessment_report(result: Assessment) -> tuple[str, dict[str, str]]:
         noise=noise_rows(verdict),
         noise_origin=sentences.noise_origin(verdict),
         noise_check=sentences.noise_check(verdict),
+        noise_spectrum=sentences.noise_spectrum(verdict),
+        noise_mask=sentences.noise_mask(verdict),
         local_level=sentences.local_level(verdict),
         audit=audit_rows(verdict),
         provenance=provenance_rows(verdict["provenance"]),

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
@@ -15,9 +16,21 @@ from gravbasin.runs.verdict import RIDGE
 if TYPE_CHECKING:
     from gravbasin.scenario import Scenario
 
-__all__ = ["identifiability", "local_level", "meaning", "noise_check", "noise_origin", "roundness"]
+__all__ = [
+    "identifiability",
+    "local_level",
+    "meaning",
+    "noise_check",
+    "noise_mask",
+    "noise_origin",
+    "noise_spectrum",
+    "roundness",
+]
 
 Verdict = Mapping[str, Any]
+
+MASK_MATTERS = 0.15
+"""Difference of noise with the structure left out and fitted, above which a reader is warned (common practice)."""
 
 LITTLE = 0.7
 """Share of the prior's width from which an interval says little that was not put in."""
@@ -141,6 +154,50 @@ def noise_check(verdict: Verdict) -> str:
     if check["ratio"] > 1:
         return f"{outcome} The map is rougher than the model: signal-to-noise and misfit are probably overstated."
     return f"{outcome} The map is quieter than the model: signal-to-noise and misfit are probably understated."
+
+
+def noise_spectrum(verdict: Verdict) -> str:
+    """How the map's spectrum and grain compare with maps simulated from the model."""
+    spectrum = (verdict.get("noise_check") or {}).get("spectrum")
+    if spectrum is None:
+        return ""
+    ratio = spectrum["ratio"]
+    worst = max(range(len(ratio)), key=lambda i: abs(math.log(ratio[i])))
+    near, times = number(spectrum["wavelength_km"][worst], 2), number(ratio[worst], 2)
+    told = f"Power by wavelength is that of maps simulated from the model (p = {probability(spectrum['p_value'])})."
+    if spectrum["p_value"] < 0.05:
+        told = (
+            f"Power by wavelength is not that of maps simulated from the model (p = "
+            f"{probability(spectrum['p_value'])}): near {near} km the map has {times} times as much."
+        )
+    chance = f"p = {probability(spectrum['grain_p_value'])}"
+    if spectrum["grain_p_value"] >= 0.05:
+        return f"{told} The map has no grain beyond what chance gives ({chance})."
+    return (
+        f"{told} The map has a grain: smoothest along azimuth {spectrum['grain_azimuth_deg']:.0f}°, with "
+        f"{number(spectrum['grain_ratio'], 2)} times the power across it ({chance}). "
+        "Signal-to-noise ratios and evidence take noise as alike in all directions; the chance test, made on the map "
+        "itself, does not."
+    )
+
+
+def noise_mask(verdict: Verdict) -> str:
+    """Whether leaving the structure out and fitting it give the same noise."""
+    rough = (verdict.get("noise_check") or {}).get("roughness_mgal")
+    if rough is None:
+        return ""
+    out, fitted = rough["structure_left_out"], rough["structure_fitted"]
+    told = (
+        f"Over the structure's diameter the map varies by {number(out, 2)} mGal with the structure left out, which is "
+        f"what is used, and by {number(fitted, 2)} mGal where a multiple of the modelled one is fitted instead."
+    )
+    if abs(fitted / out - 1.0) <= MASK_MATTERS:
+        return told
+    return (
+        f"{told} They differ by more than {100 * MASK_MATTERS:.0f} %: the surroundings of the structure are "
+        f"{'rougher' if fitted > out else 'smoother'} than the rest of the map, or it is not what was modelled. Take "
+        "signal-to-noise ratios with as much doubt."
+    )
 
 
 def local_level(verdict: Verdict) -> str:

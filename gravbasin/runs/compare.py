@@ -20,10 +20,8 @@ from gravbasin.inference.likelihood import RingLikelihood, ring_likelihood, shap
 from gravbasin.inference.marks import Mark, shape_marks
 from gravbasin.inference.response import ring_response
 from gravbasin.observed import (
-    NoiseCheck,
     NoiseModel,
     RingMeans,
-    check_noise,
     estimate_noise,
     fit_regional,
     polynomial_basis,
@@ -31,6 +29,7 @@ from gravbasin.observed import (
 )
 from gravbasin.runs.families import compare_families, impact_bank
 from gravbasin.runs.forward_run import Modelled
+from gravbasin.runs.noise_trial import NoiseTrial, try_noise
 from gravbasin.runs.places import Places, places_of
 from gravbasin.scenario import Scenario
 from gravbasin.survey.sight import ring_sight
@@ -55,8 +54,8 @@ class Comparison:
 
     Attributes
     ----------
-    noise, noise_check
-        Noise model, and how well it foretells parts of the map left out (None for a stated one).
+    noise, noise_trial
+        Noise model, and how it stood its trial (None for a stated one).
     rings : RingMeans
         Observed ring means, mGal; rings with little coverage left out.
     template, template_draws : (n_ring,), (n_ring, n_draw) arrays, mGal
@@ -86,7 +85,7 @@ class Comparison:
     """
 
     noise: NoiseModel
-    noise_check: NoiseCheck | None
+    noise_trial: NoiseTrial | None
     rings: RingMeans
     template: Array
     template_draws: Array
@@ -203,9 +202,14 @@ def compare_with_map(
     )
     predicted = impact.quantiles(impact_rings, [0.5, 0.05, 0.95])
     exclude = _mask(scenario)
+    maps = _maps(observed, noise, _on_map(scenario, modelled, observed), exclude)
     return Comparison(
         noise=noise,
-        noise_check=check_noise(observed, noise, exclude=exclude) if noise.n_points else None,
+        noise_trial=try_noise(
+            observed, noise, maps.modelled, exclude=exclude, diameter=_diameter(scenario), seed=scenario.seed
+        )
+        if noise.n_points
+        else None,
         rings=rings,
         template=templates[:, 0],
         template_draws=templates[:, 1:],
@@ -222,7 +226,7 @@ def compare_with_map(
         marks=marks,
         places=places,
         vanishing=vanishing_erosion(scenario, ring_sight(response, covariances, regional), modelled.radius),
-        maps=_maps(observed, noise, _on_map(scenario, modelled, observed), exclude),
+        maps=maps,
     )
 
 

@@ -86,7 +86,7 @@ def verdict_of(
 
 
 def _map_results(scenario: Scenario, comparison: Comparison) -> dict[str, Any]:
-    impact, fit, check = comparison.posteriors[0], comparison.fit, comparison.noise_check
+    impact, fit, trial = comparison.posteriors[0], comparison.fit, comparison.noise_trial
     results: dict[str, Any] = {
         "fit": {
             "chi2": fit.chi2,
@@ -123,8 +123,8 @@ def _map_results(scenario: Scenario, comparison: Comparison) -> dict[str, Any]:
         }
     if circularity is not None:
         results["circularity"] = dataclasses.asdict(circularity)
-    if check is not None:
-        results["noise_check"] = dataclasses.asdict(check)
+    if trial is not None:
+        results["noise_check"] = trial.as_dict()
     return results
 
 
