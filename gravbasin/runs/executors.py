@@ -169,7 +169,7 @@ class DaskExecutor:
         from distributed import Client, LocalCluster
 
         if self.address is None:
-            # In place of dask's own settings: returning memory to the system early costs a case a quarter more time.
+            # In place of dask's own settings: returning memory to the system early costs a case an eighth more time.
             alone = {f"{name}_NUM_THREADS": 1 for name in ("OMP", "MKL", "NUMBA", "OPENBLAS")}
             self._stack.enter_context(dask.config.set({"distributed.nanny.pre-spawn-environ": alone}))
             self._shelf = Path(self._stack.enter_context(tempfile.TemporaryDirectory(prefix="gravbasin-")))
