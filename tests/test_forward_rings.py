@@ -133,7 +133,7 @@ def test_an_eroded_paraboloid_is_a_smaller_paraboloid():
 
     def bowl(radius, depth, layers):
         rings = np.concatenate([np.linspace(0.0, 8e3, 60), [9e3, 10e3, 11e3]])
-        outline = lambda z: radius * np.sqrt(np.maximum(1 - z / depth, 0.0))  # noqa: E731
+        outline = lambda z: radius * np.sqrt(np.maximum(1 - z / depth, 0.0))  # noqa: E731 - one formula, used once
         return revolution_section(outline, layers, rings, contrast=lambda z: np.full_like(z, -200.0))
 
     layers, stations = np.linspace(0.0, 2e3, 41), np.linspace(0.0, 15e3, 9)

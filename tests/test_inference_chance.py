@@ -48,7 +48,7 @@ def test_covariance_matches_random_fields(stencil):
 
 def test_random_fields_carry_their_local_level(stencil):
     level = Level(1.5, 6.0)
-    variance, _ = Roughness(level, level.scale, level.dof).draw(np.random.default_rng(5), 1500)
+    variance, _ = Roughness(level.scale, level.dof).draw(np.random.default_rng(5), 1500)
     data = random_ring_means(stencil, STEP, NOISE, variance, seed=5)
     ratio = np.sum(stencil.likelihood.whiten(data) ** 2, axis=0) / stencil.likelihood.dof / level.scale
     assert stats.kstest(ratio, stats.f(stencil.likelihood.dof, level.dof).cdf).pvalue > 1e-3

@@ -166,7 +166,8 @@ def test_csv_of_degrees_by_range(tmp_path: Path, values: np.ndarray) -> None:
 
 
 def _geotiff(path: Path, values: np.ndarray, *, area: bool, crs: str = "EPSG:32633", units: str = "mGal") -> Path:
-    rasterio = pytest.importorskip("rasterio")
+    import rasterio
+
     step_x, step_y = EASTING[1] - EASTING[0], NORTHING[1] - NORTHING[0]
     corner = rasterio.Affine(step_x, 0.0, EASTING[0] - step_x / 2, 0.0, -step_y, NORTHING[-1] + step_y / 2)
     with rasterio.open(
@@ -321,4 +322,4 @@ def test_path_faults_and_contradictions(tmp_path: Path, values: np.ndarray) -> N
     with pytest.raises(InputError, match="contradicts the file"):
         read_grid(tmp_path / "whole.nc", units="m s-2")
     with pytest.raises(InputError, match='must be "refuse" or "skip"'):
-        read_grid(tmp_path / "whole.nc", nan="fill")  # type: ignore[arg-type]
+        read_grid(tmp_path / "whole.nc", nan="fill")  # type: ignore[arg-type] - what is wrong is what is tested

@@ -144,7 +144,6 @@ def test_killed_at_every_step_of_finishing_it_ends_as_if_never_broken(tmp_path, 
 
 
 def test_a_dask_worker_killed_in_mid_run_changes_nothing(tmp_path, unbroken, monkeypatch):
-    pytest.importorskip("distributed")
     monkeypatch.setattr("gravbasin.runs.sweep_cost.BATCH_SECONDS", (0.1, 0.1))
     made = DaskExecutor(None, 2)
     monkeypatch.setattr("gravbasin.runs.sweep.executor_of", lambda name, workers: made)

@@ -183,7 +183,8 @@ def station_table():
 
 def test_station_files_read_back_the_same_in_a_gis(tmp_path):
     """GeoJSON in degrees and GeoPackage in metres, read with pyogrio, against the table itself."""
-    pyogrio = pytest.importorskip("pyogrio")
+    import pyogrio
+
     site, table = station_table()
     (tmp_path / "s.geojson").write_text(stations_geojson(table))
     write_geopackage(table, site.crs, tmp_path / "s.gpkg")
@@ -203,7 +204,6 @@ def test_station_files_read_back_the_same_in_a_gis(tmp_path):
 
 
 def test_polygons_and_lines_survive_a_geopackage(tmp_path):
-    pytest.importorskip("pyogrio")
     import struct
 
     from pyogrio import raw

@@ -12,7 +12,7 @@ from scipy import fft, interpolate, linalg, sparse
 from gravbasin.discs import ring_fractions
 from gravbasin.observed import NoiseModel, polynomial_basis, ring_covariance, ring_radii, stencil_axes
 
-__all__ = ["FINE_ORDERS", "SHAPE_ORDERS", "TEXTURE_ORDERS", "Harmonics", "texture_map"]
+__all__ = ["FINE_ORDERS", "SHAPE_ORDERS", "Harmonics"]
 
 Array = NDArray[np.float64]
 
@@ -25,8 +25,8 @@ FINE_ORDERS = (5, 6)
 TEXTURE_ORDERS = (3, 4, 5, 6)
 """What neither a wrong centre nor an elongated structure has: the texture of the map about a place."""
 
-TEXTURE_RINGS = 16
-"""Rings, about, over which the texture is taken."""
+RINGS = 16
+"""Rings, about, that finer ones are merged to: no harmonic of these orders needs more."""
 
 NODES_PER_WAVE = 3.0
 """Nodes about a ring per wave of a harmonic, below which the ring does not count for that order."""
@@ -77,6 +77,7 @@ class Harmonics:
         cls, edges: Array, spacing: tuple[float, float], noise: NoiseModel, *, resolution: float | None = None
     ) -> Harmonics:
         """Harmonics over rings with these edges (m) on a lattice of this spacing (m), for a map of this resolution."""
+        edges = edges[:: max(1, round((edges.size - 1) / RINGS))]
         easting, northing = stencil_axes(edges, spacing)
         shape, radius = (northing.size, easting.size), ring_radii(edges)
         share = ring_fractions(easting, northing, edges).T.tocsr()
@@ -122,6 +123,35 @@ class Harmonics:
         profile = self.mean @ windows
         power = [sum(_power(w, windows, profile if m == 1 else None) for w in self.waves[m]) for m in orders]
         return np.array(power), np.array([sum(wave.dof for wave in self.waves[m]) for m in orders])
+
+    def texture(self, values: Array) -> Array:
+        """Whitened power of orders 3 to 6 about every node of a map, 1 on average under the noise model.
+
+        Parameters
+        ----------
+        values : (n_northing, n_easting) array, mGal
+            The map; gaps are NaN.
+
+        Returns
+        -------
+        (n_northing, n_easting) array
+            NaN where rings leave the map, and everywhere if no ring has nodes enough; nodes whose rings meet a gap mean
+            nothing.
+        """
+        waves = [wave for m in TEXTURE_ORDERS for wave in self.waves[m]]
+        dof, (height, width) = sum(wave.dof for wave in waves), self.shape
+        texture = np.full(values.shape, np.nan)
+        if dof < 1 or values.shape[0] < height or values.shape[1] < width:
+            return texture
+        # Correlation that keeps within the map never wraps, so transforms need no padding.
+        size = [fft.next_fast_len(n, real=True) for n in values.shape]
+        spectrum = fft.rfft2(np.nan_to_num(values - np.nanmean(values)), size)
+        power = np.zeros((values.shape[0] - height + 1, values.shape[1] - width + 1))
+        for kernel in np.concatenate([wave.whitening for wave in waves]):
+            found = fft.irfft2(spectrum * np.conj(fft.rfft2(kernel.reshape(height, width), size)), size)
+            power += found[: power.shape[0], : power.shape[1]] ** 2
+        texture[height // 2 : height // 2 + power.shape[0], width // 2 : width // 2 + power.shape[1]] = power / dof
+        return texture
 
     def stretch(self, window: Array, anomaly: Array | None = None) -> tuple[Array, Array]:
         """Cosine and sine part of the elongation at one place, and their errors at the noise model's level.
@@ -191,46 +221,3 @@ def _power(wave: _Wave, windows: Array, profile: Array | None) -> Array:
         size = np.sum(moved**2, axis=0)
         power -= np.divide(np.sum(moved * found, axis=0) ** 2, size, out=np.zeros_like(size), where=size > 0.0)
     return np.asarray(power)
-
-
-def texture_map(
-    values: Array, edges: Array, spacing: tuple[float, float], noise: NoiseModel, *, resolution: float | None = None
-) -> Array:
-    """Texture about every node: whitened power of orders 3 to 6 over rings, 1 on average under the noise model.
-
-    Parameters
-    ----------
-    values : (n_northing, n_easting) array, mGal
-        The map; gaps are NaN.
-    edges : (n_ring + 1,) array, m
-        Of the rings that the structure is judged on.
-    spacing : (float, float), m
-        Of the map, northing and easting.
-    noise : NoiseModel
-        Of the map.
-    resolution : float, optional, m
-        Of the map, where coarser than its nodes.
-
-    Returns
-    -------
-    (n_northing, n_easting) array
-        NaN where rings leave the map, and everywhere if no ring has nodes enough; nodes whose rings meet a gap mean
-        nothing.
-    """
-    coarse = edges[:: max(1, round((edges.size - 1) / TEXTURE_RINGS))]
-    harmonics = Harmonics.build(coarse, spacing, noise, resolution=resolution)
-    kernels = [w.whitening for m in TEXTURE_ORDERS for w in harmonics.waves[m]]
-    dof = sum(w.dof for m in TEXTURE_ORDERS for w in harmonics.waves[m])
-    height, width = harmonics.shape
-    texture = np.full(values.shape, np.nan)
-    if dof < 1 or values.shape[0] < height or values.shape[1] < width:
-        return texture
-    # Correlation that keeps within the map never wraps, so transforms need no padding.
-    size = [fft.next_fast_len(n, real=True) for n in values.shape]
-    spectrum = fft.rfft2(np.nan_to_num(values - np.nanmean(values)), size)
-    power = np.zeros((values.shape[0] - height + 1, values.shape[1] - width + 1))
-    for kernel in np.concatenate(kernels):
-        found = fft.irfft2(spectrum * np.conj(fft.rfft2(kernel.reshape(height, width), size)), size)
-        power += found[: power.shape[0], : power.shape[1]] ** 2
-    texture[height // 2 : height // 2 + power.shape[0], width // 2 : width // 2 + power.shape[1]] = power / dof
-    return texture

@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 
 from gravbasin import labels
 from gravbasin.report.canvas import svg
-from gravbasin.report.html import template
+from gravbasin.report.html import provenance_rows, template
 from gravbasin.report.sweep_figures import heat_figure
 from gravbasin.report.words import given, number
 from gravbasin.runs.sampling import Axis
@@ -81,7 +81,7 @@ def sweep_report(scenario: Scenario, cases: xr.Dataset) -> str:
         still=_still(cases, bins, pair) if pair else "",
         shown=min(SHOWN_CASES, cases.sizes["case"]),
         data=_embedded(_data(cases, names, scalars, bins, pair)),
-        provenance=_provenance(cases),
+        provenance=provenance_rows(labels.read_provenance(cases)),
     )
     return page
 
@@ -216,10 +216,3 @@ def _embedded(data: dict[str, Any]) -> str:
     """JSON that no value in it can end early."""
     text = json.dumps(data, ensure_ascii=False, separators=(",", ":"), allow_nan=False)
     return text.replace("<", "\\u003c").replace("\u2028", "\\u2028").replace("\u2029", "\\u2029")
-
-
-def _provenance(cases: xr.Dataset) -> list[tuple[str, str]]:
-    facts = labels.read_provenance(cases)
-    rows = [("scenario, SHA-256", str(facts.get("scenario_sha256"))), ("seed", str(facts.get("seed")))]
-    rows += [(f"version of {name}", str(version)) for name, version in facts.get("versions", {}).items()]
-    return rows + ([("map, SHA-256", str(facts["map_sha256"]))] if facts.get("map_sha256") else [])

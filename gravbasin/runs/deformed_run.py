@@ -18,25 +18,19 @@ from gravbasin.forward.motion import rock_above_m
 from gravbasin.forward.rings import ring_table
 from gravbasin.scenario import Scenario
 
-__all__ = ["deformed_grid", "deformed_map", "deformed_profiles"]
+__all__ = ["deformed_anomaly", "deformed_map", "deformed_profiles"]
 
 Array = NDArray[np.float64]
 
 
-def deformed_grid(scenario: Scenario, model: CraterModel, mesh: Mesh, step: float) -> xr.DataArray:
-    """Anomaly of the deformed structure on a grid of this step (m) about its centre, mGal."""
-    (section,) = _reaching_up(scenario, [model], mesh)
-    reach = float(azimuthal_mean(section, scenario.deformation).radius_edges[-1])
-    half = int(np.ceil(reach / step)) + 2
-    axis = step * np.arange(-half, half + 1.0)
-    return deformed_map(scenario, model, mesh, axis)
-
-
-def deformed_map(scenario: Scenario, model: CraterModel, mesh: Mesh, axis: Array) -> xr.DataArray:
-    """The same on the nodes of an axis, m, easting and northing alike."""
-    (section,) = _reaching_up(scenario, [model], mesh)
-    prisms = layered_prisms(section, axis, axis, deformation=scenario.deformation)
-    return grid_anomaly(prisms, height_m=scenario.model.station_height_m)
+def deformed_anomaly(
+    scenario: Scenario, model: CraterModel, mesh: Mesh, step: float, radius: Array, earth: Literal["flat", "sphere"]
+) -> tuple[Array, xr.DataArray]:
+    """Mean anomaly over circles at `radius` (m), and the anomaly on a grid of this step (m) about the centre, mGal."""
+    (section,), means = _bent(scenario, [model], mesh)
+    half = int(np.ceil(float(means[0].radius_edges[-1]) / step)) + 2
+    grid = _on_axis(scenario, section, step * np.arange(-half, half + 1.0))
+    return _profiles(scenario, means, radius, earth)[0], grid
 
 
 def deformed_profiles(
@@ -57,12 +51,37 @@ def deformed_profiles(
     earth : str
         "flat" or "sphere".
     """
+    return _profiles(scenario, _bent(scenario, models, mesh)[1], radius, earth)
+
+
+def deformed_map(scenario: Scenario, model: CraterModel, mesh: Mesh, axis: Array) -> xr.DataArray:
+    """Anomaly on the nodes of an axis about the centre, m, easting and northing alike, mGal."""
+    return _on_axis(scenario, _reaching_up(scenario, [model], mesh)[0], axis)
+
+
+def _on_axis(scenario: Scenario, section: xr.Dataset, axis: Array) -> xr.DataArray:
+    prisms = layered_prisms(section, axis, axis, deformation=scenario.deformation)
+    return grid_anomaly(prisms, height_m=scenario.model.station_height_m)
+
+
+def _bent(scenario: Scenario, models: Sequence[CraterModel], mesh: Mesh) -> tuple[list[xr.Dataset], list[xr.Dataset]]:
+    """Sections, and their azimuthal means once deformed, on the rings that the widest one needs."""
     sections = _reaching_up(scenario, models, mesh)
     widest = max(range(len(models)), key=lambda i: models[i].outer_radius)
-    rings = azimuthal_mean(sections[widest], scenario.deformation).radius_edges.values
-    means = [azimuthal_mean(section, scenario.deformation, radius_edges=rings) for section in sections]
-    # Where contrast sank deeper there are more layers below the common ones.
-    layers = max((mean.depth_edges.values for mean in means), key=len)
+    first = azimuthal_mean(sections[widest], scenario.deformation)
+    rings = first.radius_edges.values
+    means = [
+        first if i == widest else azimuthal_mean(section, scenario.deformation, radius_edges=rings)
+        for i, section in enumerate(sections)
+    ]
+    return sections, means
+
+
+def _profiles(
+    scenario: Scenario, means: Sequence[xr.Dataset], radius: Array, earth: Literal["flat", "sphere"]
+) -> Array:
+    """Anomaly of means on common rings; where contrast sank deeper there are more layers below the common ones."""
+    layers, rings = max((mean.depth_edges.values for mean in means), key=len), means[0].radius_edges.values
     contrasts = np.zeros((len(means), layers.size - 1, rings.size - 1))
     for contrast, mean in zip(contrasts, means, strict=True):
         contrast[: mean.sizes["depth"]] = mean.density_contrast.values

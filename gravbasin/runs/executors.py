@@ -18,6 +18,7 @@ from typing import TYPE_CHECKING, Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
+from threadpoolctl import threadpool_limits
 
 from gravbasin.errors import CannotFinish, InputError
 from gravbasin.runs.case_bench import Recipe
@@ -26,7 +27,7 @@ from gravbasin.runs.cases import CaseMaker
 if TYPE_CHECKING:
     from distributed import Client
 
-__all__ = ["Done", "Executor", "Task", "executor_of", "one_thread"]
+__all__ = ["Done", "Executor", "Task", "executor_of"]
 
 Array = NDArray[np.float64]
 
@@ -109,7 +110,7 @@ class SerialExecutor:
 
     def run(self, recipe: Recipe, tasks: Iterator[Task]) -> Iterator[Done]:
         """Do the batches in order."""
-        with one_thread():
+        with threadpool_limits(1):
             for task in tasks:
                 yield _work(recipe, task)
 
@@ -130,7 +131,7 @@ class ThreadExecutor:
     def run(self, recipe: Recipe, tasks: Iterator[Task]) -> Iterator[Done]:
         """Do the batches as threads come free."""
         waiting: set[futures.Future[Done]] = set()
-        with one_thread():
+        with threadpool_limits(1):
             for task in tasks:
                 waiting.add(self._pool.submit(_work, recipe, task))
                 if len(waiting) > self.workers:
@@ -147,7 +148,7 @@ class DaskExecutor:
 
     def __init__(self, address: str | None, workers: int) -> None:
         try:
-            import distributed  # noqa: F401
+            import distributed  # noqa: F401 - only whether it is there
         except ImportError:
             raise InputError(
                 "executor", address or "dask", "needs dask.distributed", "install it: pip install 'gravbasin[dask]'"
@@ -264,20 +265,9 @@ def _work_alone(recipe: Recipe, task: Task, shelf: Path | None) -> Done:
     maker_of(recipe).bench.shelf = shelf
     global _held
     if not _held:
-        from threadpoolctl import threadpool_limits
-
         threadpool_limits(1)
         _held = True
     return _work(recipe, task)
 
 
 _held = False
-
-
-@contextlib.contextmanager
-def one_thread() -> Iterator[None]:
-    """One thread of linear algebra in this process for the time being."""
-    from threadpoolctl import threadpool_limits
-
-    with threadpool_limits(1):
-        yield

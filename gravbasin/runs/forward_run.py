@@ -23,7 +23,7 @@ from gravbasin.forward.audit import Audit, audit_anomaly
 from gravbasin.forward.layers import grid_anomaly, layered_prisms
 from gravbasin.forward.motion import is_axisymmetric
 from gravbasin.forward.rings import RingTable, ring_table
-from gravbasin.runs.deformed_run import deformed_grid, deformed_profiles
+from gravbasin.runs.deformed_run import deformed_anomaly, deformed_profiles
 from gravbasin.scenario import Scenario
 from gravbasin.scenario_file import scenario_hash
 
@@ -133,13 +133,13 @@ def model_anomaly(scenario: Scenario, *, farthest: float = 0.0) -> Modelled:
     table = ring_table(radius, mesh.radius_edges, mesh.depth_edges, height_m=height, earth=earth)
     parts = table.anomaly(contrast_parts(model, mesh))
     profile = parts.sum(axis=0)
-    scattered = _forward_draws(draws, mesh, table)
-    if not is_axisymmetric(scenario.deformation):
-        grid = _placed(scenario, deformed_grid(scenario, model, mesh, float(grid.easting[1] - grid.easting[0])))
-        profile = deformed_profiles(scenario, [model], mesh, radius, earth)[0]
-        if draws:
-            coarse = shared_mesh(draws, layers=DRAWN_CELLS[0], rings=DRAWN_CELLS[1])
-            scattered = deformed_profiles(scenario, draws, coarse, radius, earth)
+    if is_axisymmetric(scenario.deformation):
+        scattered = _forward_draws(draws, mesh, table)
+    else:
+        step = float(grid.easting[1] - grid.easting[0])
+        profile, grid = deformed_anomaly(scenario, model, mesh, step, radius, earth)
+        grid = _placed(scenario, grid)
+        scattered = _bend_draws(scenario, draws, radius, earth)
     facts = labels.provenance(
         scenario=scenario_hash(scenario),
         versions=labels.versions("harmonica", "numpy", "scipy"),
@@ -165,6 +165,13 @@ def _forward_draws(draws: list[CraterModel], mesh: Mesh, table: RingTable) -> Ar
         return np.zeros((0, table.kernel.shape[0]))
     contrasts = np.stack([contrast_parts(draw, mesh).sum(axis=0) for draw in draws])
     return np.asarray(table.anomaly(contrasts))
+
+
+def _bend_draws(scenario: Scenario, draws: list[CraterModel], radius: Array, earth: Literal["flat", "sphere"]) -> Array:
+    if not draws:
+        return np.zeros((0, radius.size))
+    coarse = shared_mesh(draws, layers=DRAWN_CELLS[0], rings=DRAWN_CELLS[1])
+    return deformed_profiles(scenario, draws, coarse, radius, earth)
 
 
 def _audited_grid(

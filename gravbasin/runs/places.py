@@ -12,7 +12,7 @@ from gravbasin import labels
 from gravbasin.inference.bank import Bank
 from gravbasin.inference.chance import Chance, Stencil, chance_of, complete_nodes, random_ring_means
 from gravbasin.inference.circularity import Circularity, circularity_test
-from gravbasin.inference.harmonics import Harmonics, texture_map
+from gravbasin.inference.harmonics import Harmonics
 from gravbasin.inference.level import Level, Roughness, fit_roughness
 from gravbasin.inference.likelihood import RingLikelihood
 from gravbasin.inference.odds import log_odds
@@ -116,10 +116,8 @@ def places_of(
     misfits = np.sum(stencil.likelihood.whiten(data[:, elsewhere]) ** 2, axis=0)
     node = (int(np.argmin(np.abs(north - rings.centre[1]))), int(np.argmin(np.abs(east - rings.centre[0]))))
     texture = np.full(observed.shape, np.nan)
-    texture[rows, columns] = texture_map(observed.values, rings.edges_m, rings.spacing_m, noise, resolution=resolution)[
-        rows, columns
-    ]
-    there = texture[rows, columns]
+    harmonics = Harmonics.build(rings.edges_m, rings.spacing_m, noise, resolution=resolution)
+    texture[rows, columns] = there = harmonics.texture(observed.values)[rows, columns]
     roughness = fit_roughness(misfits, stencil.likelihood.dof, there[elsewhere], independent)
     level = roughness.at_one(float(texture[node]))
     templates = stencil.response @ bank.profiles.T
@@ -141,7 +139,6 @@ def places_of(
     picked = np.random.default_rng([seed, 3]).choice(
         np.flatnonzero(elsewhere), min(ROUNDNESS_PLACES, int(elsewhere.sum())), replace=False
     )
-    harmonics = Harmonics.build(rings.edges_m, rings.spacing_m, noise, resolution=resolution)
     others = (rows[picked], columns[picked])
     circularity = circularity_test(observed, harmonics, node, others, level=roughness.anywhere, profile=profile)
     return dataclasses.replace(places, chance=chance, circularity=circularity)

@@ -133,35 +133,36 @@ class Design:
         if self.sweep.design == "latin hypercube":
             return self._hypercube[first:last]
         if self.sweep.design == "sobol":
-            return self._sobol(len(self.axes), first, last)
+            return self._sobol(first, last)
         # Saltelli: for every base point the rows A, B, and A with one column of B, side by side.
         k = len(self.axes)
         base = np.arange(first // (k + 2), (last - 1) // (k + 2) + 1)
-        pair = self._sobol(2 * k, int(base[0]), int(base[-1]) + 1)
+        pair = self._sobol(int(base[0]), int(base[-1]) + 1)
         a, b = pair[:, :k], pair[:, k:]
         rows = np.stack([a, b, *(np.where(np.arange(k) == j, b, a) for j in range(k))], axis=1).reshape(-1, k)
         start = int(base[0]) * (k + 2)
         return rows[first - start : last - start]
 
-    def _sobol(self, dimensions: int, first: int, last: int) -> Array:
-        sampler = self._sampler(dimensions)
+    def _sobol(self, first: int, last: int) -> Array:
+        sampler = self._sampler
         if sampler.num_generated > first:
             sampler.reset()
         # The first piece, and it alone, must be a power of two long: take one point by itself.
-        start = sampler.random(1) if sampler.num_generated == 0 else np.empty((0, dimensions))
+        nothing = np.empty((0, sampler.d))
+        start = sampler.random(1) if sampler.num_generated == 0 else nothing
         if first > sampler.num_generated:
             sampler.fast_forward(first - sampler.num_generated)
         rest = last - sampler.num_generated
-        points = sampler.random(rest) if rest else np.empty((0, dimensions))
+        points = sampler.random(rest) if rest else nothing
         return np.concatenate([start, points]) if first == 0 else points
 
-    def _sampler(self, dimensions: int) -> qmc.Sobol:
-        if not hasattr(self, "_made"):
-            from scipy.stats import qmc
+    @cached_property
+    def _sampler(self) -> qmc.Sobol:
+        from scipy.stats import qmc
 
-            seed = int(np.random.default_rng([self.seed, STREAM]).integers(2**31))
-            object.__setattr__(self, "_made", qmc.Sobol(dimensions, seed=seed))
-        return self._made  # type: ignore[attr-defined]
+        dimensions = len(self.axes) * (2 if self.sweep.design == "saltelli" else 1)
+        seed = int(np.random.default_rng([self.seed, STREAM]).integers(2**31))
+        return qmc.Sobol(dimensions, seed=seed)
 
     @cached_property
     def _hypercube(self) -> Array:

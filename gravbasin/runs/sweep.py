@@ -158,7 +158,7 @@ def _write(scenario: Scenario, plan: Plan, store: CaseStore) -> None:
         scenario_sha256=scenario_hash(scenario),
         seed=scenario.seed,
         versions=labels.versions("numpy", "scipy"),
-        map_sha256=plan.map_hash,
+        map={"sha256": plan.map_hash},
     )
     rows = store.records()
     write_csv(store.folder / "cases.csv", plan.maker, rows, store.failed)

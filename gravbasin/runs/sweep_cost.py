@@ -10,10 +10,11 @@ import sys
 import time
 
 import numpy as np
+from threadpoolctl import threadpool_limits
 
 from gravbasin.errors import CannotFinish, InputError
 from gravbasin.runs.case_store import CaseStore
-from gravbasin.runs.executors import DaskExecutor, Executor, one_thread
+from gravbasin.runs.executors import DaskExecutor, Executor
 from gravbasin.runs.sweep_plan import Plan
 
 __all__ = ["LIMITS", "Cost", "cost_of", "duration", "refuse_above"]
@@ -85,7 +86,7 @@ def cost_of(plan: Plan, executor: Executor) -> Cost:
     """Measure a sample and reckon the whole."""
     maker, size = plan.maker, plan.design.size
     begun = time.perf_counter()
-    with one_thread():
+    with threadpool_limits(1):
         per_case, slow = _measured(plan)
     start = max(time.perf_counter() - begun - slow, 0.0)
     tiles = round(_batch_seconds(executor.workers) / per_case / maker.tile)

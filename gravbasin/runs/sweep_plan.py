@@ -6,6 +6,8 @@ import dataclasses
 from collections.abc import Iterator
 from pathlib import Path
 
+from threadpoolctl import threadpool_limits
+
 from gravbasin import labels
 from gravbasin.crater import with_samples
 from gravbasin.errors import InputError
@@ -14,7 +16,7 @@ from gravbasin.runs.case_bench import Recipe
 from gravbasin.runs.case_store import CaseStore
 from gravbasin.runs.cases import CaseMaker
 from gravbasin.runs.compare import noise_of
-from gravbasin.runs.executors import Task, maker_of, one_thread
+from gravbasin.runs.executors import Task, maker_of
 from gravbasin.runs.sampling import Design
 from gravbasin.runs.scenario_map import scenario_map
 from gravbasin.runs.variants import Variants
@@ -127,6 +129,6 @@ def _of_map(scenario: Scenario, design: Design) -> tuple[NoiseModel | None, floa
         raise InputError(
             "sweep.fields", swept[0], "cannot vary: the noise comes from the map", "state the noise, or drop it"
         )
-    with one_thread():
+    with threadpool_limits(1):
         noise = None if stated else noise_of(scenario, observed)
     return noise, step, labels.read_provenance(observed).get("sha256")

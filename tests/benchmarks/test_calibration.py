@@ -11,7 +11,7 @@ from scipy import stats
 from gravbasin.inference.bank import ImpactFamily, build_bank
 from gravbasin.inference.chance import Stencil, chance_of, complete_nodes
 from gravbasin.inference.evidence import evidence
-from gravbasin.inference.harmonics import texture_map
+from gravbasin.inference.harmonics import Harmonics
 from gravbasin.inference.level import Level, fit_roughness
 from gravbasin.inference.likelihood import ring_likelihood
 from gravbasin.inference.odds import log_odds
@@ -89,7 +89,7 @@ def _false_alarms(bank, fields, nominal):
         rows, columns = complete_nodes(field, stencil.shape)
         data = stencil.ring_means(field.values, rows, columns)
         misfits = np.sum(stencil.likelihood.whiten(data) ** 2, axis=0)
-        texture = texture_map(field.values, EDGES, (STEP, STEP), NOISE)[rows, columns]
+        texture = Harmonics.build(EDGES, (STEP, STEP), NOISE).texture(field.values)[rows, columns]
         independent = rows.size * STEP**2 / (np.pi * 45e3**2)
         level = fit_roughness(misfits, stencil.likelihood.dof, texture, independent).at(texture)
         templates = stencil.response @ bank.profiles[:2000].T

@@ -44,7 +44,6 @@ def test_ten_thousand_profiles_serial_within_a_minute(tmp_path):
 
 def test_two_local_workers_are_faster_in_the_same_run(tmp_path):
     """The whole command, cluster, tables, files and report included; the same bits."""
-    pytest.importorskip("distributed")
     asked = question(32_768, "sobol", draws=2)
     serial, first = _seconds(asked, tmp_path / "serial", "serial")
     dask, second = _seconds(asked, tmp_path / "dask", "dask", workers=2)
