@@ -217,7 +217,7 @@ def test_samples_narrow_the_structure_and_stand_in_folder_and_page(sampled, tmp_
 
 def test_the_figure_of_samples_shows_each_where_it_lies(sampled) -> None:
     compared, update = sampled.samples
-    density, porosity = samples_figure(compared, update, sampled.section).axes
+    density, porosity = samples_figure(compared, update).axes
     lines = {line.get_label(): line for line in density.get_lines()}
     used = compared.outlier.values == 0
     np.testing.assert_array_equal(lines["measured"].get_ydata(), compared.density.values[used])
@@ -227,12 +227,15 @@ def test_the_figure_of_samples_shows_each_where_it_lies(sampled) -> None:
     assert places[-1] > np.nanmax(compared.transect.values) / 1e3  # no position: after the end, and told
     assert "no position" in porosity.get_xlabel()
     np.testing.assert_array_equal(porosity.get_lines()[0].get_ydata(), 100 * compared.porosity.values)
+    near, far = compared.held_high.values[[2, 0]]  # 6 and 30 km from the centre of a structure 40 km across
+    assert near > 0.01 > far >= 0.0
+    np.testing.assert_allclose(compared.held_low, 0.3 * compared.held_high)
 
 
 def test_samples_without_positions_or_porosity_are_drawn_in_their_order(sampled) -> None:
     compared, update = sampled.samples
     bare = compared.assign(transect=compared.transect * np.nan, porosity=compared.porosity * np.nan)
-    (density,) = samples_figure(bare, update, sampled.section).axes
+    (density,) = samples_figure(bare, update).axes
     assert "order of the table" in density.get_xlabel()
 
 

@@ -309,6 +309,9 @@ def _integrated(squares: Array, count: int, spread: float) -> Array:
 def with_samples(scenario: Scenario) -> tuple[Scenario, xr.Dataset, SampleUpdate]:
     """The scenario narrowed by its samples, their comparison, and what they said.
 
+    The comparison also holds ``held_low`` and ``held_high``, the porosity that the narrowed structure lets a hand
+    sample of its place hold.
+
     The layer at today's ground (cover, or all layers of the basement) takes on the posterior density and its
     uncertainty; fracture porosity and its scatter become those of the posterior.
 
@@ -326,7 +329,13 @@ def with_samples(scenario: Scenario) -> tuple[Scenario, xr.Dataset, SampleUpdate
     )
     changes = _shifted_background(scenario, update)
     background = scenario.background.model_copy(update=changes)
-    return scenario.model_copy(update={"damage": damage, "background": background}), compared, update
+    narrowed = scenario.model_copy(update={"damage": damage, "background": background})
+    shape, _ = _relative_porosity(crater_model(narrowed), compared.radius.values)
+    held = {
+        f"held_{end}": ("sample", share * update.porosity * shape, {"units": "1", "long_name": f"{word} porosity held"})
+        for end, word, share in zip(("low", "high"), ("least", "largest"), HAND_SHARE, strict=True)
+    }
+    return narrowed, compared.assign(held), update
 
 
 def _shifted_background(scenario: Scenario, update: SampleUpdate) -> Mapping[str, object]:

@@ -52,6 +52,7 @@ def assessment_report(result: Assessment) -> tuple[str, dict[str, str]]:
         name=scenario.name,
         note=scenario.note,
         verdict=verdict,
+        cautions=verdict["cautions"],
         meaning=sentences.meaning(scenario, verdict),
         deformed=not is_axisymmetric(scenario.deformation),
         numbers=key_numbers(verdict),

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import xarray as xr
 
-from gravbasin.crater.samples import HAND_SHARE, SampleUpdate
+from gravbasin.crater.samples import SampleUpdate
 from gravbasin.report.canvas import BAND, FAINT, INK, MODEL, QUIET, SMALL, Array, blank_figure, tidy
 
 if TYPE_CHECKING:
@@ -19,17 +19,13 @@ __all__ = ["samples_figure"]
 KM = 1000.0
 
 
-def samples_figure(compared: xr.Dataset, update: SampleUpdate, section: xr.Dataset) -> Figure:
+def samples_figure(compared: xr.Dataset, update: SampleUpdate) -> Figure:
     """Density, and porosity where it was measured.
 
     Parameters
     ----------
-    compared : Dataset (sample)
-        From `compare_samples`.
-    update : SampleUpdate
-        What the samples said.
-    section : Dataset (depth, radius)
-        The structure narrowed by them; its porosity at the ground is what hand samples are held against.
+    compared, update
+        From `with_samples`.
     """
     porous = bool(np.isfinite(compared.porosity).any())
     figure = blank_figure(5.6 if porous else 3.8)
@@ -41,7 +37,7 @@ def samples_figure(compared: xr.Dataset, update: SampleUpdate, section: xr.Datas
     if porous:
         density.tick_params(labelbottom=False)
         last = figure.add_axes((0.10, 0.18, 0.86, 0.22), sharex=density)
-        _porosities(last, places, compared, section)
+        _porosities(last, places, compared)
     last.set_xlabel(words, fontsize=SMALL + 1, color=INK)
     handles, labels = density.get_legend_handles_labels()
     figure.legend(handles, labels, loc="lower left", bbox_to_anchor=(0.09, 0.0), ncols=3, fontsize=SMALL, frameon=False)
@@ -91,11 +87,8 @@ def _densities(axes: Axes, places: Array, compared: xr.Dataset, update: SampleUp
     tidy(axes, y="density (kg/m³)", title="Density")
 
 
-def _porosities(axes: Axes, places: Array, compared: xr.Dataset, section: xr.Dataset) -> None:
-    radius = compared.radius.values
-    at = np.where(np.isfinite(radius), radius, float(section.radius[-1]))
-    model = 100 * np.interp(at, section.radius.values, section.porosity.isel(depth=0).values)
-    axes.vlines(places, HAND_SHARE[0] * model, HAND_SHARE[1] * model, color=BAND, linewidth=6)
+def _porosities(axes: Axes, places: Array, compared: xr.Dataset) -> None:
+    axes.vlines(places, 100 * compared.held_low, 100 * compared.held_high, color=BAND, linewidth=6)
     axes.plot(places, 100 * compared.porosity.values, "o", color=INK, markersize=4)
     axes.set_ylim(bottom=0)
     tidy(axes, y="porosity (%)", title="Porosity; bars: what the model lets a hand sample hold")

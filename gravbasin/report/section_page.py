@@ -50,7 +50,7 @@ def section_report(described: SectionDescription) -> tuple[str, dict[str, str]]:
         Each figure as a file's text (SVG) by name.
     """
     drawn = [_section(described), _parts(described), _erosion(described)]
-    drawn += [_samples(*described.samples, described.section)] if described.samples else []
+    drawn += [_samples(*described.samples)] if described.samples else []
     drawings = {drawing.name: drawing for drawing in drawn}
     dimensions = described.model.dimensions
     page = template("section.html.j2").render(
@@ -121,14 +121,14 @@ def _erosion(described: SectionDescription) -> Drawing:
     return Drawing("erosion", EROSION, caption, text)
 
 
-def _samples(compared: xr.Dataset, update: SampleUpdate, section: xr.Dataset) -> Drawing:
+def _samples(compared: xr.Dataset, update: SampleUpdate) -> Drawing:
     caption = (
         "Each sample where it lies along the line of best fit through all: measured, and the range its minerals allow "
         "with the pores it has. Band and dashed line: density of unfractured target at today's ground, by these "
         "samples and before them. Crosses lie so far from what was expected of them that they were set aside."
     )
     words = f"{update.used} samples used, {update.outliers} set aside, {update.in_fill} on crater fill."
-    text = svg(samples_figure(compared, update, section), name="samples", title=SAMPLES, description=words)
+    text = svg(samples_figure(compared, update), name="samples", title=SAMPLES, description=words)
     return Drawing("samples", SAMPLES, caption, text)
 
 
