@@ -161,6 +161,11 @@ def test_a_centre_off_the_map_is_told_in_one_line(place):
 def test_a_map_that_is_not_there_is_told_by_the_scenarios_own_field(place):
     with pytest.raises(gb.InputError, match=r"^observed\.path = .*nowhere\.nc: is not a file; check the path$"):
         gb.assess(_scenario(place, place / "nowhere.nc"))
+    holed = place / "gap.nc"
+    with xr.open_dataset(place / "map.nc", engine="h5netcdf") as source:
+        source.load().where(source.easting > EASTING[0]).to_netcdf(holed, engine="h5netcdf")
+    with pytest.raises(gb.InputError, match=r'use observed\.nan = "skip"'):
+        gb.assess(_scenario(place, holed))
     with pytest.raises(gb.InputError, match=r"^map\.nc: observed\.variable = free_air: must be a grid in the file"):
         gb.assess(_scenario(place, place / "map.nc", **{"observed.variable": "free_air"}))
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import re
+
 import xarray as xr
 
 from gravbasin.errors import InputError
@@ -34,10 +36,10 @@ def scenario_map(scenario: Scenario, *, centred: bool = True) -> xr.DataArray | 
     try:
         observed = read_grid(given.path, variable=given.variable, nan=given.nan, units=given.units)
     except InputError as error:
-        if error.what not in FIELDS:
-            raise
+        what = f"observed.{error.what}" if error.what in FIELDS else error.what
         where = error.where if error.where == given.path.name else ""
-        raise InputError(f"observed.{error.what}", error.value, error.rule, error.remedy, where) from None
+        remedy = re.sub(rf"\b({'|'.join(FIELDS)})=", r"observed.\1 = ", error.remedy)
+        raise InputError(what, error.value, error.rule, remedy, where) from None
     centres = (("easting", given.centre_easting_km), ("northing", given.centre_northing_km)) if centred else ()
     for axis, centre_km in centres:
         low, high = observed[axis].values[[0, -1]] / 1e3
